@@ -1,0 +1,1 @@
+"""Export layouts that the tool reads, one file each; found through the entry points `vop.readers`."""

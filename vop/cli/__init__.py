@@ -1,0 +1,1 @@
+"""Click commands, one file each: parse, call one public function, print. No numerics."""

@@ -1,0 +1,173 @@
+"""Files that are whole or absent: atomic writing, and the header that every file of ours carries."""
+
+from __future__ import annotations
+
+import errno
+import hashlib
+import os
+from collections.abc import Iterator
+from contextlib import contextmanager
+from pathlib import Path
+
+import h5py
+import numpy as np
+
+from vop.errors import InputError, OutputError
+from vop.metadata import Metadata
+
+#: Suffix of files that are being written; what a killed process leaves behind bears it.
+PARTIAL = ".partial"
+
+_REASONS = {
+    errno.ENOSPC: "the disk is full",
+    errno.EDQUOT: "the disk quota is used up",
+    errno.EROFS: "the file system is read-only",
+    errno.EACCES: "permission denied",
+    errno.EPERM: "permission denied",
+    errno.ENOENT: "the folder does not exist",
+    errno.ENOTDIR: "part of the path is not a folder",
+    errno.EFBIG: "the file would be larger than allowed",
+}
+
+
+@contextmanager
+def atomic_path(final: str | os.PathLike[str], force: bool = False) -> Iterator[Path]:
+    """Yield a temporary path beside ``final``; rename it there once the body has succeeded.
+
+    The bytes are flushed to the disk before the rename. On any exception, Ctrl-C included, the
+    temporary file is removed and ``final`` is as it was.
+
+    Raises
+    ------
+    OutputError
+        If ``final`` exists and not ``force``, or the operating system refuses to write.
+    """
+    final = Path(final)
+    if final.exists() and not force:
+        raise OutputError(f"{final} exists already; remove it, choose another name, or use --force")
+    if final.is_dir():
+        raise OutputError(f"{final} is a folder; give the name of a file")
+    temporary = final.with_name(f".{final.name}.{os.getpid()}{PARTIAL}")
+    try:
+        yield temporary
+        _flush(temporary)
+        if force:
+            os.replace(temporary, final)
+        else:
+            _rename_unless_exists(temporary, final)
+        _flush(final.parent)
+    except OSError as error:
+        raise OutputError(f"cannot write {final}: {_reason(error)}; nothing was left behind") from error
+    finally:
+        temporary.unlink(missing_ok=True)
+
+
+def _rename_unless_exists(temporary: Path, final: Path) -> None:
+    try:
+        os.link(temporary, final)
+    except FileExistsError:
+        raise OutputError(f"{final} was written by another process meanwhile; left alone") from None
+    except OSError:  # a file system without hard links
+        os.replace(temporary, final)
+
+
+def _flush(path: Path) -> None:
+    descriptor = os.open(path, os.O_RDONLY)
+    try:
+        os.fsync(descriptor)
+    finally:
+        os.close(descriptor)
+
+
+def _reason(error: OSError) -> str:
+    # HDF5 hides the cause in its text: "... errno = 28, error message = 'No space left ...'".
+    number = error.errno
+    if number is None:
+        text = str(error)
+        for candidate in _REASONS:
+            if f"errno = {candidate}," in text:
+                number = candidate
+    if number in _REASONS:
+        return _REASONS[number]
+    return (str(error) or type(error).__name__).splitlines()[0]
+
+
+def write_text(final: str | os.PathLike[str], text: str, force: bool = False) -> None:
+    """Write UTF-8 text atomically (see :func:`atomic_path`)."""
+    with atomic_path(final, force) as temporary:
+        temporary.write_text(text, encoding="utf-8")
+
+
+def file_digest(path: str | os.PathLike[str]) -> str:
+    """SHA-256, hexadecimal, of a file's bytes.
+
+    Raises
+    ------
+    InputError
+        Where the file cannot be read.
+    """
+    try:
+        with open(path, "rb") as handle:
+            return hashlib.file_digest(handle, "sha256").hexdigest()
+    except OSError as error:
+        raise InputError(f"cannot read {path}: {error.strerror or error}") from error
+
+
+@contextmanager
+def open_hdf5(path: str | os.PathLike[str]) -> Iterator[h5py.File]:
+    """Open an HDF5 file for reading; every fault inside becomes an InputError that names it.
+
+    Raises
+    ------
+    InputError
+        Where the file is missing, truncated, no HDF5, lacks a dataset, or vanishes in mid-read.
+    """
+    if not Path(path).is_file():
+        raise InputError(f"{path}: no such file")
+    try:
+        with h5py.File(path, "r") as handle:
+            yield handle
+    except (OSError, RuntimeError) as error:
+        why = str(error).splitlines()[0]
+        raise InputError(f"{path}: not readable as HDF5 (missing, truncated or damaged): {why}") from error
+    except KeyError as error:
+        why = str(error.args[0]) if error.args else "unknown"
+        raise InputError(f"{path}: lacks an expected item: {why}") from error
+
+
+def write_header(handle: h5py.File, kind: str, version: int, metadata: Metadata) -> None:
+    """Write the root attributes that every file of ours carries."""
+    from vop import __version__
+
+    handle.attrs["format"] = kind
+    handle.attrs["format_version"] = version
+    handle.attrs["written_by"] = f"vop {__version__}"
+    handle.attrs["metadata"] = metadata.to_json()
+
+
+def read_header(handle: h5py.File, kind: str, version: int) -> Metadata:
+    """Check format and version, and return the metadata.
+
+    Raises
+    ------
+    InputError
+        Where the file is of another kind, or of a version that this code does not know.
+    """
+    found = handle.attrs.get("format")
+    if not isinstance(found, str) or found != kind:
+        raise InputError(f"{handle.filename}: expected a file of format {kind!r}, found {found!r}")
+    found_version = handle.attrs.get("format_version")
+    if found_version != version:
+        raise InputError(
+            f"{handle.filename}: {kind} version {found_version!r} is not known here; "
+            f"this tool reads version {version}"
+        )
+    return Metadata.from_json(str(handle.attrs.get("metadata", "")))
+
+
+def require_finite(values: np.ndarray, what: str) -> None:
+    """Raise InputError, naming ``what`` and the first index, where ``values`` holds NaN or infinity."""
+    bad = ~np.isfinite(values)
+    if bad.any():
+        at = [int(i) for i in np.argwhere(bad)[0]]
+        raise InputError(f"{what} holds {int(bad.sum())} NaN or infinite values, the first at index {at}")
