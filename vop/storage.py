@@ -30,6 +30,17 @@ _REASONS = {
 }
 
 
+def refuse_existing(final: str | os.PathLike[str], force: bool) -> None:
+    """Raise OutputError where ``final`` could not be written; called before hours of work, too."""
+    final = Path(final)
+    if final.is_dir():
+        raise OutputError(f"{final} is a folder; give the name of a file")
+    if final.exists() and not force:
+        raise OutputError(f"{final} exists already; remove it, choose another name, or use --force")
+    if not final.parent.is_dir():
+        raise OutputError(f"{final}: the folder {final.parent} does not exist")
+
+
 @contextmanager
 def atomic_path(final: str | os.PathLike[str], force: bool = False) -> Iterator[Path]:
     """Yield a temporary path beside ``final``; rename it there once the body has succeeded.
@@ -43,10 +54,7 @@ def atomic_path(final: str | os.PathLike[str], force: bool = False) -> Iterator[
         If ``final`` exists and not ``force``, or the operating system refuses to write.
     """
     final = Path(final)
-    if final.exists() and not force:
-        raise OutputError(f"{final} exists already; remove it, choose another name, or use --force")
-    if final.is_dir():
-        raise OutputError(f"{final} is a folder; give the name of a file")
+    refuse_existing(final, force)
     temporary = final.with_name(f".{final.name}.{os.getpid()}{PARTIAL}")
     try:
         yield temporary
