@@ -23,7 +23,19 @@ _HOMES = {
     "prove": "vop.proof",
 }
 
-__all__ = [*_HOMES, "__version__"]
+__all__ = [
+    "FieldSource",
+    "SarModel",
+    "VopError",
+    "VopSet",
+    "__version__",
+    "build_sar_model",
+    "compress",
+    "export",
+    "open_fields",
+    "peak_spatial_average",
+    "prove",
+]
 
 if TYPE_CHECKING:
     from vop.build import build_sar_model

@@ -78,17 +78,21 @@ def check_power(
         warnings.append(f"reference is {quantity}: passivity cannot be checked without the port impedances")
         return PowerChecks(values, own, None, None, tuple(lines), tuple(warnings))
     if values[-1] > 1.0 + _PASSIVITY_ROUNDING:
-        text = (f"passivity violated: the absorbed-power matrix has an eigenvalue of {values[-1]:.4g} W per "
-                "watt, a passive array cannot exceed 1; check peak/rms (a factor of 2), the unit of "
-                "length or of E, and the reference of the excitation")
+        text = (
+            f"passivity violated: the absorbed-power matrix has an eigenvalue of {values[-1]:.4g} W per "
+            "watt, a passive array cannot exceed 1; check peak/rms (a factor of 2), the unit of "
+            "length or of E, and the reference of the excitation"
+        )
         if waiver is None:
-            raise InputError(text + ", or state passivity_waiver = \"reason\" under [input]")
+            raise InputError(text + ', or state passivity_waiver = "reason" under [input]')
         warnings.append(f"{text}; accepted by the engineer: {waiver}")
     else:
         lines.append(f"passivity: holds, {values[-1]:.4g} ≤ 1 W/W (necessary, far from sufficient)")
     if scattering is None or quantity != "forward power":
-        warnings.append("no S-matrix was read: absorbed power was not compared with accepted power, so "
-                        "SAR that is too low would not be noticed")
+        warnings.append(
+            "no S-matrix was read: absorbed power was not compared with accepted power, so "
+            "SAR that is too low would not be noticed"
+        )
         return PowerChecks(values, own, None, None, tuple(lines), tuple(warnings))
     inside = np.eye(len(own)) - scattering.conj().T @ scattering
     accepted = inside.diagonal().real
@@ -101,17 +105,23 @@ def check_power(
         )
     lines.append(f"reciprocity of S: |S − Sᵀ| ≤ {np.abs(scattering - scattering.T).max():.2g}")
     if beyond > 0:
-        warnings.append(f"some excitation absorbs {beyond:.3g} W per W more than S lets in; S or the fields "
-                        "are inaccurate, or their references differ")
+        warnings.append(
+            f"some excitation absorbs {beyond:.3g} W per W more than S lets in; S or the fields "
+            "are inaccurate, or their references differ"
+        )
     share = remainder / accepted
     worst = int(np.argmax(np.abs(share)))
-    words = (f"accepted power that is not absorbed in tissue: {100 * share.min():.0f} to "
-             f"{100 * share.max():.0f} % by channel (largest at channel {worst + 1})")
+    words = (
+        f"accepted power that is not absorbed in tissue: {100 * share.min():.0f} to "
+        f"{100 * share.max():.0f} % by channel (largest at channel {worst + 1})"
+    )
     if account:
         lines.append(f"{words}; accounted for by the engineer: {account}")
     else:
-        warnings.append(f"{words}; nobody has accounted for it (radiation, losses of the array, "
-                        "inaccuracy of S): state power_account = \"…\" under [input]")
+        warnings.append(
+            f"{words}; nobody has accounted for it (radiation, losses of the array, "
+            'inaccuracy of S): state power_account = "…" under [input]'
+        )
     return PowerChecks(values, own, accepted, beyond, tuple(lines), tuple(warnings))
 
 

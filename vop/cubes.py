@@ -63,13 +63,21 @@ class CubeGeometry:
 
     def take(self, index: np.ndarray) -> CubeGeometry:
         """The cubes at ``index`` only; ``status`` stays whole."""
-        return replace(self, voxel=self.voxel[index], kind=self.kind[index],
-                       box_m=self.box_m[index], mass_kg=self.mass_kg[index])
+        return replace(
+            self,
+            voxel=self.voxel[index],
+            kind=self.kind[index],
+            box_m=self.box_m[index],
+            mass_kg=self.mass_kg[index],
+        )
 
     def counts(self) -> dict[str, int]:
         """Voxels by status and cubes by kind, for the record."""
-        voxels = {f"voxels {s.name.lower()}": int((self.status == s).sum()) for s in VoxelStatus
-                  if s is not VoxelStatus.BACKGROUND}
+        voxels = {
+            f"voxels {s.name.lower()}": int((self.status == s).sum())
+            for s in VoxelStatus
+            if s is not VoxelStatus.BACKGROUND
+        }
         faces = int((self.kind >= CubeKind.FACE_X_LOW).sum())
         return {
             **voxels,

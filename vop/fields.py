@@ -159,9 +159,7 @@ class FieldSource(ABC):
 
     def _samples(self, cells: Box) -> Box:
         extra = 0 if self.centring == "cell" else 1
-        z, y, x = (
-            slice(*s.indices(n)[:2]) for s, n in zip(cells, self.grid.shape, strict=True)
-        )
+        z, y, x = (slice(*s.indices(n)[:2]) for s, n in zip(cells, self.grid.shape, strict=True))
         return (
             slice(z.start, z.stop + extra),
             slice(y.start, y.stop + extra),

@@ -39,8 +39,12 @@ class RectilinearGrid:
         Edges lie midway between centres, the outermost half a step beyond; on a uniform axis that
         is exact, on a graded one it is the only choice the centres allow.
         """
-        return cls(*(_edges_from_centres(np.asarray(a, dtype=np.float64), n)
-                     for a, n in ((x, "x"), (y, "y"), (z, "z"))))
+        return cls(
+            *(
+                _edges_from_centres(np.asarray(a, dtype=np.float64), n)
+                for a, n in ((x, "x"), (y, "y"), (z, "z"))
+            )
+        )
 
     @property
     def shape(self) -> tuple[int, int, int]:
@@ -58,7 +62,7 @@ class RectilinearGrid:
         z, y, x = (0.5 * (e[1:] + e[:-1]) for e in self.edges_m)
         return z, y, x
 
-    def volumes_m3(self, box: Box = (slice(None),) * 3) -> np.ndarray:  # type: ignore[assignment]
+    def volumes_m3(self, box: Box = (slice(None), slice(None), slice(None))) -> np.ndarray:
         """Cell volumes in m³, float64, of the cells of ``box``, shape (dz, dy, dx)."""
         dz, dy, dx = (np.diff(e)[s] for e, s in zip(self.edges_m, box, strict=True))
         return dz[:, None, None] * dy[None, :, None] * dx[None, None, :]

@@ -42,5 +42,7 @@ def export(
         except Exception as error:  # a third party's code may fail in any way
             raise OutputError(f"exporter {format!r} failed: {type(error).__name__}: {error}") from error
         if not np.array_equal(found, vop_set.matrices):
-            raise OutputError(f"exporter {format!r}: what was written does not read back to the set "
-                              "that was proved; nothing was left behind")
+            raise OutputError(
+                f"exporter {format!r}: what was written does not read back to the set "
+                "that was proved; nothing was left behind"
+            )

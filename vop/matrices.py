@@ -44,8 +44,10 @@ def validated_packed(matrices: np.ndarray) -> np.ndarray:
         require_finite(batch, f"matrices (counted from {start})")
         scale = np.abs(batch).max(axis=(1, 2))
         if scale.max() > np.finfo(np.float32).max / (4 * n):
-            raise InputError(f"matrix {start + int(scale.argmax())}: entries up to {scale.max():.3g} "
-                             "overflow float32 storage; check the units")
+            raise InputError(
+                f"matrix {start + int(scale.argmax())}: entries up to {scale.max():.3g} "
+                "overflow float32 storage; check the units"
+            )
         skew = np.abs(batch - batch.conj().swapaxes(1, 2)).max(axis=(1, 2))
         bad = np.flatnonzero(skew > 8 * U32 * scale)
         if bad.size:

@@ -48,7 +48,9 @@ class Conventions:
 
     def __post_init__(self) -> None:
         for name, known in (
-            ("phasor", PHASORS), ("time_sign", TIME_SIGNS), ("reference", tuple(REFERENCES)),
+            ("phasor", PHASORS),
+            ("time_sign", TIME_SIGNS),
+            ("reference", tuple(REFERENCES)),
         ):
             value = getattr(self, name)
             if value not in known:

@@ -126,13 +126,13 @@ def find(group: str, name: str) -> Any:
             if plugin.fault is not None:
                 raise PluginError(f"{kind} {name!r} of {plugin.package} does not load: {plugin.fault}")
             return plugin.target
-    raise PluginError(f"no {kind} is called {name!r}{_nearest(name, names(group))}; "
-                      f"installed: {', '.join(names(group)) or 'none'}")
+    raise PluginError(
+        f"no {kind} is called {name!r}{_nearest(name, names(group))}; "
+        f"installed: {', '.join(names(group)) or 'none'}"
+    )
 
 
-def open_fields(
-    path: str | os.PathLike[str], reader: str | None = None, **options: Any
-) -> FieldSource:
+def open_fields(path: str | os.PathLike[str], reader: str | None = None, **options: Any) -> FieldSource:
     """Open an export with the reader that recognises it, or the one that is named.
 
     Parameters
@@ -175,12 +175,17 @@ def reader_options(target: Reader) -> Mapping[str, inspect.Parameter]:
 
 def check_options(what: str, function: Callable[..., Any], options: Mapping[str, Any]) -> None:
     """Raise PluginError for an option that ``function`` does not take by keyword."""
-    known = [k for k, p in inspect.signature(function).parameters.items()
-             if p.kind is inspect.Parameter.KEYWORD_ONLY]
+    known = [
+        k
+        for k, p in inspect.signature(function).parameters.items()
+        if p.kind is inspect.Parameter.KEYWORD_ONLY
+    ]
     for name in options:
         if name not in known:
-            raise PluginError(f"{what} has no option {name!r}{_nearest(name, known)}; "
-                              f"it takes: {', '.join(known) or 'none'}")
+            raise PluginError(
+                f"{what} has no option {name!r}{_nearest(name, known)}; "
+                f"it takes: {', '.join(known) or 'none'}"
+            )
 
 
 def _nearest(name: str, known: list[str]) -> str:

@@ -188,8 +188,13 @@ class SarModel:
 
 def _map_rows(handle: h5py.File, name: str, width: int) -> np.ndarray:
     dataset = handle[name]
-    if (not isinstance(dataset, h5py.Dataset) or dataset.ndim != 2 or dataset.shape[1] != width
-            or dataset.shape[0] < 1 or dataset.dtype != np.dtype("<f4")):
+    if (
+        not isinstance(dataset, h5py.Dataset)
+        or dataset.ndim != 2
+        or dataset.shape[1] != width
+        or dataset.shape[0] < 1
+        or dataset.dtype != np.dtype("<f4")
+    ):
         raise InputError(
             f"{handle.filename}: {name} should be float32 of shape (N, {width}), N ≥ 1, "
             f"found {getattr(dataset, 'dtype', '?')} {getattr(dataset, 'shape', '?')}"

@@ -78,8 +78,11 @@ class VopSet:
             yield f"global/{name}", np.asarray(self.global_matrices[name], dtype=np.complex128)
 
     def _scalars(self) -> dict[str, Any]:
-        return {"method": self.method, "overestimation": float(self.overestimation),
-                "worst_case": float(self.worst_case)}
+        return {
+            "method": self.method,
+            "overestimation": float(self.overestimation),
+            "worst_case": float(self.worst_case),
+        }
 
     def digest(self) -> str:
         """SHA-256, hexadecimal, over metadata, bound and all numbers."""
@@ -139,11 +142,15 @@ def read_set(handle: h5py.File) -> VopSet:
     n = len(metadata.channel_names)
     packed, core, s = handle["vops/packed"], handle["vops/core_index"], handle["overestimation_matrix"]
     for dataset, dtype, shape in (
-        (packed, "<f4", (packed.shape[0], n * n)), (core, "<i8", packed.shape[:1]), (s, "<f8", (n * n,)),
+        (packed, "<f4", (packed.shape[0], n * n)),
+        (core, "<i8", packed.shape[:1]),
+        (s, "<f8", (n * n,)),
     ):
         if dataset.dtype != np.dtype(dtype) or dataset.shape != shape or 0 in shape:
-            raise InputError(f"{where}: {dataset.name} should be {dtype} of shape {shape}, "
-                             f"found {dataset.dtype} {dataset.shape}")
+            raise InputError(
+                f"{where}: {dataset.name} should be {dtype} of shape {shape}, "
+                f"found {dataset.dtype} {dataset.shape}"
+            )
     rows, s_row = packed[()], s[()]
     require_finite(rows, f"{where}: vops/packed")
     require_finite(s_row, f"{where}: overestimation_matrix")
@@ -153,8 +160,13 @@ def read_set(handle: h5py.File) -> VopSet:
     matrices = {k: v[()].astype(np.complex128) for k, v in handle.get("global", {}).items()}
     units = {k: str(handle[f"global/{k}"].attrs.get("unit", "not stated")) for k in matrices}
     return VopSet(
-        packed=rows, overestimation=overestimation, worst_case=worst,
-        overestimation_matrix=unpack(s_row), core_index=core[()],
-        method=str(handle.attrs["method"]), metadata=metadata,
-        global_matrices=matrices, global_units=units,
+        packed=rows,
+        overestimation=overestimation,
+        worst_case=worst,
+        overestimation_matrix=unpack(s_row),
+        core_index=core[()],
+        method=str(handle.attrs["method"]),
+        metadata=metadata,
+        global_matrices=matrices,
+        global_units=units,
     )

@@ -7,7 +7,8 @@ Variables (all double unless said):
 * ``global_NAME`` (n, n) complex: whole-volume matrices, blanks in their names as ``_``;
 * ``selftest_w`` (n, m) complex and ``selftest_sar`` (m, 1): excitations and the max_k real(w'·A_k·w)
   that a right consumer gets; a lost conjugate, a transposed order or √2 shows at once;
-* texts ``holds``, ``unit``, ``reference``, ``channel_names``, ``domain``, ``caution``, ``digest``, ``schema``.
+* texts ``holds``, ``unit``, ``reference``, ``channel_names``, ``domain``, ``warnings``, ``caution``,
+  ``digest``, ``schema``.
 """
 
 from __future__ import annotations

@@ -38,8 +38,7 @@ _CHUNK_CACHE_BYTES = 8 << 20
 class ChannelHdf5Source(FieldSource):
     """Fields of one such folder; files are opened when first read and kept open."""
 
-    def __init__(self, folder: Path, files: list[Path], tissue_file: Path,
-                 options: dict[str, Any]) -> None:
+    def __init__(self, folder: Path, files: list[Path], tissue_file: Path, options: dict[str, Any]) -> None:
         self._files = files
         self._tissue_file = tissue_file
         self._handles: dict[int, h5py.File] = {}
@@ -51,8 +50,9 @@ class ChannelHdf5Source(FieldSource):
             with open_hdf5(file) as handle:
                 frequencies.append(_number(handle, "frequency"))
                 scales.append(_wave(handle))
-                stated.append({k: _text(handle, k) for k in
-                               ("phasor", "time_sign", "reference", "b0_direction")})
+                stated.append(
+                    {k: _text(handle, k) for k in ("phasor", "time_sign", "reference", "b0_direction")}
+                )
                 self._check_grid(handle, axes)
         if len(set(frequencies)) != 1:
             raise InputError(f"{folder}: the channels differ in frequency: {sorted(set(frequencies))} Hz")
@@ -78,11 +78,14 @@ class ChannelHdf5Source(FieldSource):
             axes = {a: handle[f"axes/{a}"][()] for a in "xyz"}
         where = str(self._tissue_file)
         if label.ndim != 3 or label.dtype.kind not in "ui":
-            raise InputError(f"{where}: label should be integers of shape (z, y, x), found "
-                             f"{label.dtype} {label.shape}")
+            raise InputError(
+                f"{where}: label should be integers of shape (z, y, x), found {label.dtype} {label.shape}"
+            )
         if not len(sigma) == len(rho) == len(names) or label.min() < 0 or label.max() >= len(names):
-            raise InputError(f"{where}: labels run from {label.min()} to {label.max()}, with {len(names)} "
-                             f"names, {len(sigma)} conductivities and {len(rho)} densities")
+            raise InputError(
+                f"{where}: labels run from {label.min()} to {label.max()}, with {len(names)} "
+                f"names, {len(sigma)} conductivities and {len(rho)} densities"
+            )
         counts = tuple(axes[a].size for a in "zyx")
         if label.shape == counts:
             self.centring = "cell"
@@ -91,8 +94,10 @@ class ChannelHdf5Source(FieldSource):
             self.centring = "node"
             self.grid = RectilinearGrid(axes["x"], axes["y"], axes["z"])
         else:
-            raise InputError(f"{where}: label {label.shape} fits neither the cells nor the nodes of axes "
-                             f"with {counts} positions (z, y, x)")
+            raise InputError(
+                f"{where}: label {label.shape} fits neither the cells nor the nodes of axes "
+                f"with {counts} positions (z, y, x)"
+            )
         self.tissue = Tissue(sigma[label], rho[label], label, dict(enumerate(names)))
         return axes
 
@@ -102,13 +107,17 @@ class ChannelHdf5Source(FieldSource):
             found = handle[f"axes/{a}"][()]
             step = np.diff(wanted).min()
             if found.shape != wanted.shape or not np.allclose(found, wanted, rtol=0, atol=1e-3 * step):
-                raise InputError(f"{where}: axis {a} ({found.size} positions) differs from the tissue's "
-                                 f"({wanted.size}); all files must share one grid")
+                raise InputError(
+                    f"{where}: axis {a} ({found.size} positions) differs from the tissue's "
+                    f"({wanted.size}); all files must share one grid"
+                )
         shape = (3, *(axes[a].size for a in "zyx"))
         for part in ("E/real", "E/imag"):
             if handle[part].shape != shape or handle[part].dtype.kind != "f":
-                raise InputError(f"{where}: {part} should be real numbers of shape {shape}, found "
-                                 f"{handle[part].dtype} {handle[part].shape}")
+                raise InputError(
+                    f"{where}: {part} should be real numbers of shape {shape}, found "
+                    f"{handle[part].dtype} {handle[part].shape}"
+                )
 
     def _read_network(self, folder: Path) -> None:
         found = sorted(folder.glob(f"*.s{self.n_channels}p"))
@@ -117,8 +126,9 @@ class ChannelHdf5Source(FieldSource):
         self._network_file = found[0] if found else None
         if self._network_file is None:
             return
-        from vop.errors import PluginError
         from vop.network import read_touchstone
+
+        from vop.errors import PluginError
 
         try:
             network = read_touchstone(self._network_file, self.frequency_hz)
@@ -161,8 +171,10 @@ class ChannelHdf5Source(FieldSource):
             out.real = real[(slice(None), *box)]
             out.imag = imag[(slice(None), *box)]
         except (OSError, KeyError, TypeError, ValueError) as error:
-            raise InputError(f"{self._files[channel]}: {field} cannot be read (truncated or damaged): "
-                             f"{str(error).splitlines()[0]}") from error
+            raise InputError(
+                f"{self._files[channel]}: {field} cannot be read (truncated or damaged): "
+                f"{str(error).splitlines()[0]}"
+            ) from error
         return out
 
 
@@ -178,7 +190,9 @@ def _natural_order(file: Path) -> tuple[Any, ...]:
 def _number(handle: h5py.File, name: str) -> float:
     value = np.asarray(handle.attrs.get(name, np.nan), dtype=np.float64)
     if value.size != 1 or not np.isfinite(value).all() or not (value > 0).all():
-        raise InputError(f"{handle.filename}: attribute {name!r} should be one positive number, found {value}")
+        raise InputError(
+            f"{handle.filename}: attribute {name!r} should be one positive number, found {value}"
+        )
     return float(value.reshape(()))
 
 
@@ -195,8 +209,10 @@ def _wave(handle: h5py.File) -> complex | None:
     parts = np.asarray(handle.attrs["incident_wave"], dtype=np.float64)
     require_finite(parts, f"{handle.filename}: attribute 'incident_wave'")
     if parts.shape != (2,) or not parts.any():
-        raise InputError(f"{handle.filename}: attribute 'incident_wave' should be (real, imaginary), "
-                         f"not both zero, found {parts}")
+        raise InputError(
+            f"{handle.filename}: attribute 'incident_wave' should be (real, imaginary), "
+            f"not both zero, found {parts}"
+        )
     return complex(parts[0], parts[1])
 
 
@@ -210,8 +226,13 @@ class ChannelHdf5Reader:
         return path.is_dir() and (path / _TISSUE).is_file() and any(path.glob("channel_*.h5"))
 
     def open(
-        self, path: Path, *, phasor: str | None = None, time_sign: str | None = None,
-        reference: str | None = None, pattern: str = "channel_*.h5",
+        self,
+        path: Path,
+        *,
+        phasor: str | None = None,
+        time_sign: str | None = None,
+        reference: str | None = None,
+        pattern: str = "channel_*.h5",
     ) -> FieldSource:
         """Open the folder.
 

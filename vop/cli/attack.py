@@ -16,8 +16,9 @@ from vop.vopset import VopSet
 @click.command(name="attack")
 @options.path_argument("SET")
 @options.path_argument("MODEL")
-@click.option("--excitations", type=click.IntRange(1), default=1_000_000, show_default=True,
-              help="How many to try.")
+@click.option(
+    "--excitations", type=click.IntRange(1), default=1_000_000, show_default=True, help="How many to try."
+)
 @click.option("--seed", type=int, default=0, show_default=True, help="Of the random excitations.")
 def command(set: Path, model: Path, excitations: int, seed: int) -> None:
     """Search for excitations whose local SAR in MODEL exceeds what SET says. Finding none proves

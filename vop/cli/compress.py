@@ -31,6 +31,8 @@ def command(model: Path, output: Path, overestimation: float, method: str, force
     with progress_on_terminal() as progress:
         vop_set = compress(loaded, overestimation, method, progress=progress)
         vop_set.save(output, force)
-    click.echo(f"{output}: {len(vop_set)} VOPs from {len(loaded)} matrices, {vop_set.n_channels} channels; "
-               f"overestimation at most {100 * vop_set.overestimation:g} % of worst-case local SAR "
-               f"{vop_set.worst_case:.6g} {vop_set.metadata.reference.sar_unit}; not proved yet: vop prove")
+    click.echo(
+        f"{output}: {len(vop_set)} VOPs from {len(loaded)} matrices, {vop_set.n_channels} channels; "
+        f"overestimation at most {100 * vop_set.overestimation:g} % of worst-case local SAR "
+        f"{vop_set.worst_case:.6g} {vop_set.metadata.reference.sar_unit}; not proved yet: vop prove"
+    )

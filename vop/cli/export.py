@@ -15,8 +15,9 @@ from vop.vopset import VopSet
 @click.command(name="export")
 @options.path_argument("SET")
 @options.path_argument("OUTPUT")
-@click.option("--format", "format_", default="hdf5", show_default=True,
-              help="Exporter plugin (see 'vop plugins').")
+@click.option(
+    "--format", "format_", default="hdf5", show_default=True, help="Exporter plugin (see 'vop plugins')."
+)
 @options.force
 def command(set: Path, output: Path, format_: str, force: bool) -> None:
     """Write the delivered VOPs of SET to OUTPUT. What is written is read back and compared to the
@@ -28,5 +29,7 @@ def command(set: Path, output: Path, format_: str, force: bool) -> None:
     """
     vop_set = VopSet.load(set)
     export(vop_set, output, format_, force=force)
-    click.echo(f"{output}: {len(vop_set)} VOPs, {vop_set.n_channels} channels, "
-               f"{output.stat().st_size} bytes, SHA-256 {file_digest(output)}")
+    click.echo(
+        f"{output}: {len(vop_set)} VOPs, {vop_set.n_channels} channels, "
+        f"{output.stat().st_size} bytes, SHA-256 {file_digest(output)}"
+    )

@@ -13,8 +13,14 @@ from vop.plugins import open_fields
 @click.command(name="inspect")
 @options.path_argument("PATH")
 @options.reading
-def command(path: Path, reader: str | None, phasor: str | None, time_sign: str | None,
-            reference: str | None, reader_options: tuple[str, ...]) -> None:
+def command(
+    path: Path,
+    reader: str | None,
+    phasor: str | None,
+    time_sign: str | None,
+    reference: str | None,
+    reader_options: tuple[str, ...],
+) -> None:
     """Say what an export, a model or a set holds; for an export also whether its power adds up.
 
     \b
@@ -22,7 +28,7 @@ def command(path: Path, reader: str | None, phasor: str | None, time_sign: str |
       vop inspect export/ --phasor peak --time-sign +
       vop inspect set.h5
     """
-    from vop.report import inspect_file, inspect_source
+    from vop.summary import inspect_file, inspect_source
 
     lines = inspect_file(path) if path.is_file() else None
     if lines is None:

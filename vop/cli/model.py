@@ -14,13 +14,27 @@ from vop.plugins import open_fields
 @click.command(name="model")
 @options.path_argument("EXPORT")
 @options.output("model.h5")
-@click.option("--average-mass", "average_mass_g", type=float, default=10.0, show_default=True,
-              help="Averaging mass in grams; 0 for point matrices.")
+@click.option(
+    "--average-mass",
+    "average_mass_g",
+    type=float,
+    default=10.0,
+    show_default=True,
+    help="Averaging mass in grams; 0 for point matrices.",
+)
 @options.reading
 @options.force
-def command(export: Path, output: Path, average_mass_g: float, reader: str | None, phasor: str | None,
-            time_sign: str | None, reference: str | None, reader_options: tuple[str, ...],
-            force: bool) -> None:
+def command(
+    export: Path,
+    output: Path,
+    average_mass_g: float,
+    reader: str | None,
+    phasor: str | None,
+    time_sign: str | None,
+    reference: str | None,
+    reader_options: tuple[str, ...],
+    force: bool,
+) -> None:
     """Read EXPORT and write the matrices of its local SAR, averaged over cubes of tissue.
 
     \b
@@ -28,13 +42,14 @@ def command(export: Path, output: Path, average_mass_g: float, reader: str | Non
       vop model export/ --phasor peak --time-sign + -o model.h5
     """
     from vop.build import build_sar_model
-    from vop.report import model_lines
     from vop.storage import refuse_existing
+    from vop.summary import model_lines
 
     refuse_existing(output, force)
     source = open_fields(export, reader, **options.gather(phasor, time_sign, reference, reader_options))
     with progress_on_terminal() as progress:
-        model = build_sar_model(source, average_mass_g / 1000 or None, path=output, force=force,
-                                progress=progress)
+        model = build_sar_model(
+            source, average_mass_g / 1000 or None, path=output, force=force, progress=progress
+        )
     click.echo("\n".join(model_lines(model)))
     click.echo(f"written to {output}")

@@ -17,8 +17,9 @@ force = click.option("--force", is_flag=True, help="Replace an output that exist
 
 def output(default: str) -> Callable[[F], F]:
     """``-o/--output FILE``."""
-    return click.option("-o", "--output", type=_FILE, default=Path(default), show_default=True,
-                        help="File to write.")
+    return click.option(
+        "-o", "--output", type=_FILE, default=Path(default), show_default=True, help="File to write."
+    )
 
 
 def path_argument(name: str) -> Callable[[F], F]:
@@ -28,33 +29,51 @@ def path_argument(name: str) -> Callable[[F], F]:
 
 def reading(command: F) -> F:
     """Options of everything that opens an export."""
-    for option in reversed((
-        click.option("--reader", help="Reader plugin; by default the one that recognises the path."),
-        click.option("--phasor", help="'peak' or 'rms': what |E| in the export is."),
-        click.option("--time-sign", help="'+' for exp(+jωt), '-' for exp(−jωt)."),
-        click.option("--reference", help="What |w|² is: 'forward power', 'accepted power', "
-                                         "'port voltage', 'port current'."),
-        click.option("--reader-option", "reader_options", multiple=True, metavar="NAME=VALUE",
-                     help="Further option of the reader; may be repeated."),
-    )):
+    for option in reversed(
+        (
+            click.option("--reader", help="Reader plugin; by default the one that recognises the path."),
+            click.option("--phasor", help="'peak' or 'rms': what |E| in the export is."),
+            click.option("--time-sign", help="'+' for exp(+jωt), '-' for exp(−jωt)."),
+            click.option(
+                "--reference",
+                help="What |w|² is: 'forward power', 'accepted power', 'port voltage', 'port current'.",
+            ),
+            click.option(
+                "--reader-option",
+                "reader_options",
+                multiple=True,
+                metavar="NAME=VALUE",
+                help="Further option of the reader; may be repeated.",
+            ),
+        )
+    ):
         command = option(command)
     return command
 
 
 def overestimation(command: F) -> F:
     """Options of everything that compresses."""
-    for option in reversed((
-        click.option("--overestimation", type=float, default=0.05, show_default=True,
-                     help="Bound ε as a fraction of worst-case local SAR."),
-        click.option("--method", default="clustering", show_default=True,
-                     help="'clustering' or 'clustering-free'."),
-    )):
+    for option in reversed(
+        (
+            click.option(
+                "--overestimation",
+                type=float,
+                default=0.05,
+                show_default=True,
+                help="Bound ε as a fraction of worst-case local SAR.",
+            ),
+            click.option(
+                "--method", default="clustering", show_default=True, help="'clustering' or 'clustering-free'."
+            ),
+        )
+    ):
         command = option(command)
     return command
 
 
-def gather(phasor: str | None, time_sign: str | None, reference: str | None,
-           reader_options: tuple[str, ...]) -> dict[str, Any]:
+def gather(
+    phasor: str | None, time_sign: str | None, reference: str | None, reader_options: tuple[str, ...]
+) -> dict[str, Any]:
     """Keyword options for :func:`vop.open_fields` from those of :func:`reading`."""
     options: dict[str, Any] = {
         k: v for k, v in (("phasor", phasor), ("time_sign", time_sign), ("reference", reference)) if v

@@ -44,8 +44,9 @@ class _Line:
         filled = round(share * _WIDTH)
         left = (now - self._started) * (1 - share) / share if share > 0.02 else None
         remaining = f", about {left:.0f} s left" if left is not None and left > 1 else ""
-        sys.stderr.write(f"\r\x1b[K{label:<22} {'=' * filled}{' ' * (_WIDTH - filled)}| "
-                         f"{100 * share:3.0f} %{remaining}")
+        sys.stderr.write(
+            f"\r\x1b[K{label:<22} {'=' * filled}{' ' * (_WIDTH - filled)}| {100 * share:3.0f} %{remaining}"
+        )
         sys.stderr.flush()
         self._shown = True
 

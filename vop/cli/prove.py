@@ -16,13 +16,20 @@ from vop.vopset import VopSet
 @click.command(name="prove")
 @options.path_argument("SET")
 @options.path_argument("MODEL")
-@click.option("--certificate", type=click.Path(path_type=Path),
-              help="Store the weights, so that anyone can recheck in one pass.")
-@click.option("--from-certificate", type=click.Path(path_type=Path),
-              help="Recheck stored weights instead of searching for new ones.")
+@click.option(
+    "--certificate",
+    type=click.Path(path_type=Path),
+    help="Store the weights, so that anyone can recheck in one pass.",
+)
+@click.option(
+    "--from-certificate",
+    type=click.Path(path_type=Path),
+    help="Recheck stored weights instead of searching for new ones.",
+)
 @options.force
-def command(set: Path, model: Path, certificate: Path | None, from_certificate: Path | None,
-            force: bool) -> None:
+def command(
+    set: Path, model: Path, certificate: Path | None, from_certificate: Path | None, force: bool
+) -> None:
     """Prove that SET never underestimates local SAR of MODEL for any excitation, and overestimates
     by no more than its bound. Exit code 0: proved; 1: not proved.
 
