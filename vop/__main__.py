@@ -1,0 +1,5 @@
+"""``python -m vop`` is the command ``vop``."""
+
+from vop.cli.main import run
+
+run()
