@@ -28,7 +28,8 @@ from vop.errors import InputError
 from vop.fields import FieldSource, Tissue
 from vop.grid import Box, RectilinearGrid
 from vop.metadata import Conventions
-from vop.storage import file_digest, open_hdf5, require_finite
+from vop.storage import file_digest, open_hdf5
+from vop_readers._hdf5 import natural_order, read_number, read_text, read_wave
 
 _TISSUE = "tissue.h5"
 #: Decoded chunks kept per channel file: neighbouring boxes of a tile share them.
@@ -48,10 +49,10 @@ class ChannelHdf5Source(FieldSource):
         scales, frequencies = [], []
         for file in files:
             with open_hdf5(file) as handle:
-                frequencies.append(_number(handle, "frequency"))
-                scales.append(_wave(handle))
+                frequencies.append(read_number(handle, "frequency"))
+                scales.append(read_wave(handle))
                 stated.append(
-                    {k: _text(handle, k) for k in ("phasor", "time_sign", "reference", "b0_direction")}
+                    {k: read_text(handle, k) for k in ("phasor", "time_sign", "reference", "b0_direction")}
                 )
                 self._check_grid(handle, axes)
         if len(set(frequencies)) != 1:
@@ -183,39 +184,6 @@ def _natural_name(file: Path) -> str:
     return str(int(numbers[-1])) if numbers else file.stem
 
 
-def _natural_order(file: Path) -> tuple[Any, ...]:
-    return tuple((int(p) if p.isdigit() else 0, p) for p in re.split(r"(\d+)", file.name))
-
-
-def _number(handle: h5py.File, name: str) -> float:
-    value = np.asarray(handle.attrs.get(name, np.nan), dtype=np.float64)
-    if value.size != 1 or not np.isfinite(value).all() or not (value > 0).all():
-        raise InputError(
-            f"{handle.filename}: attribute {name!r} should be one positive number, found {value}"
-        )
-    return float(value.reshape(()))
-
-
-def _text(handle: h5py.File, name: str) -> str | None:
-    value = handle.attrs.get(name)
-    if value is None:
-        return None
-    return value.decode() if isinstance(value, bytes) else str(value)
-
-
-def _wave(handle: h5py.File) -> complex | None:
-    if "incident_wave" not in handle.attrs:
-        return None
-    parts = np.asarray(handle.attrs["incident_wave"], dtype=np.float64)
-    require_finite(parts, f"{handle.filename}: attribute 'incident_wave'")
-    if parts.shape != (2,) or not parts.any():
-        raise InputError(
-            f"{handle.filename}: attribute 'incident_wave' should be (real, imaginary), "
-            f"not both zero, found {parts}"
-        )
-    return complex(parts[0], parts[1])
-
-
 class ChannelHdf5Reader:
     """One HDF5 file per channel in a folder, with a tissue file."""
 
@@ -251,7 +219,7 @@ class ChannelHdf5Reader:
             raise InputError(f"{path}: this layout is a folder with {pattern} and {_TISSUE}")
         if "/" in pattern or ".." in pattern:
             raise InputError(f"pattern {pattern!r} should name files inside the folder")
-        files = sorted(path.glob(pattern), key=_natural_order)
+        files = sorted(path.glob(pattern), key=lambda file: natural_order(file.name))
         if not files:
             raise InputError(f"{path}: no file matches {pattern!r}")
         options = {"phasor": phasor, "time_sign": time_sign, "reference": reference}
