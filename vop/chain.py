@@ -104,6 +104,8 @@ class _Chain:
         model, checks_lines = self._model()
         vop_set = self._set(model)
         proof, holds = self._proof(vop_set, model)
+        if not holds:
+            self._withdraw_exports()
         exports = self._exports(vop_set) if holds else {}
         text = job_summary(job, model, vop_set, proof, exports, checks_lines)
         write_text(job.folder / SUMMARY_FILE, text, force=True)
@@ -168,6 +170,7 @@ class _Chain:
             vop_set = VopSet.load(path)
             self._require_same(path, vop_set.metadata.details.get("step"), key)
             return vop_set
+        self._withdraw_exports()
         vop_set = compress(model, job.overestimation, job.method, progress=self.progress)
         vop_set = replace(vop_set, metadata=vop_set.metadata.with_details(step=key))
         vop_set.save(path, force=self.force)
@@ -188,11 +191,18 @@ class _Chain:
         write_text(path, json.dumps(record, indent=1, sort_keys=True) + "\n", force=True)
         return record, result.holds
 
+    def _export_path(self, name: str) -> Path:
+        return self.job.folder / f"vops-{name}{find(EXPORTERS, name).suffix}"
+
+    def _withdraw_exports(self) -> None:
+        # Hand-off files of an earlier set must not outlive it: somebody would load them.
+        for name in self.job.formats:
+            self._export_path(name).unlink(missing_ok=True)
+
     def _exports(self, vop_set: VopSet) -> dict[str, Path]:
         written = {}
         for name in self.job.formats:
-            exporter = find(EXPORTERS, name)
-            path = self.job.folder / f"vops-{name}{exporter.suffix}"
+            path = self._export_path(name)
             # Rewritten each time: cheaper than finding out whether it is still right.
             export(vop_set, path, name, force=True)
             written[name] = path
