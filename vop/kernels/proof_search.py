@@ -1,0 +1,316 @@
+"""Search for the weights of a proof. Nothing here is trusted: whatever it proposes is proved after.
+
+Each target T wants weights c ≥ 0, Σ c = 1 with Σ c_k C_k − T ⪰ 0 over the columns C. In order of cost:
+combinations that served the targets before it; single columns, filtered by witnesses (any X ⪰ 0 with
+tr(C_k X) < tr(T X) excludes column k); a small convex problem over few columns, which grows by the
+columns that its dual solution asks for (:mod:`vop.kernels.proof_convex`).
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numba import njit
+
+from vop.hermitian import pack_row, unpack_row
+from vop.kernels.proof_convex import FOUND, convex_weights
+from vop.kernels.proof_psd import cholesky, combine, largest_entry, positive_trace, shift_bound
+
+#: How a target was covered.
+OPEN, POOLED, SINGLE, COMBINED = 0, 1, 2, 3
+
+#: Combinations remembered from earlier targets, most recently used first.
+_POOL = 12
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def functional(x, n, gain, square, out):
+    """Packed functional of the excitation x (n,): row @ out = xᴴ A x."""
+    for i in range(n):
+        for j in range(n):
+            square[i, j] = x[i] * x[j].conjugate()
+    pack_row(square, n, out)
+    for p in range(n * n):
+        out[p] *= gain[p]
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def values_of(columns_t, f, out):
+    """out[k] = Σ_p columns_t[p, k] f[p], summed in fixed order."""
+    for k in range(out.shape[0]):
+        out[k] = 0.0
+    for p in range(f.shape[0]):
+        row = columns_t[p]
+        c = f[p]
+        for k in range(out.shape[0]):
+            out[k] += c * row[k]
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _dot(row, f):
+    total = 0.0
+    for p in range(f.shape[0]):
+        total += np.float64(row[p]) * f[p]
+    return total
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def failing_direction(factor, n, at, x):
+    """The unit vector along which H − shift·1 is not positive, from a factorisation that stopped."""
+    for i in range(n):
+        x[i] = 0.0
+    x[at] = 1.0
+    for i in range(at - 1, -1, -1):
+        value = -factor[at, i].conjugate()
+        for k in range(i + 1, at):
+            value -= factor[k, i].conjugate() * x[k]
+        x[i] = value / factor[i, i].real
+    norm = 0.0
+    for i in range(at + 1):
+        norm += x[i].real ** 2 + x[i].imag ** 2
+    for i in range(at + 1):
+        x[i] /= np.sqrt(norm)
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _covers(packed, entries, n, terms, h, factor):
+    """n where the combination is proved, else the failing column."""
+    unpack_row(packed, n, h)
+    # Twice the bound: the sums here are not in the order of the proof, whose shift must pass too.
+    return cholesky(h, n, 2.0 * shift_bound(positive_trace(h, n), entries, n, terms), factor)
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _to_front(order, at):
+    chosen = order[at]
+    for i in range(at, 0, -1):
+        order[i] = order[i - 1]
+    order[0] = chosen
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def search(targets, extra, columns, columns_t, probes, probe_values, scale, convex, n, gain):
+    """Propose weights for each target.
+
+    Parameters
+    ----------
+    targets : (R, n²) float32. extra : (n²,) float64 added to every combination.
+    columns : (K, n²) float32; columns_t : (n², K) float64, its transpose.
+    probes : (P, n²) float64 functionals; probe_values : (P, K), theirs on ``columns``.
+    scale : worst-case eigenvalue, sets what counts as converged.
+    convex : whether to go on to the convex problem where no single column does.
+    gain : (n²,) inner weights of the packing.
+
+    Returns
+    -------
+    how : (R,) int8, OPEN … COMBINED.
+    starts, index, weight : terms of each target as in :func:`vop.kernels.proof_psd.certify`.
+    bound : (R,) float64, for open targets an upper bound of the least eigenvalue that any weights
+        reach (float arithmetic), for others ∞.
+    witness : (R, n²) packed covariance of unit trace that attains it, zero where covered.
+    """
+    n_targets, width = targets.shape
+    n_columns = columns.shape[0]
+    how = np.zeros(n_targets, dtype=np.int8)
+    starts = np.zeros(n_targets + 1, dtype=np.int64)
+    index = np.empty(4 * n_targets + 64, dtype=np.int64)
+    weight = np.empty(4 * n_targets + 64)
+    bound = np.full(n_targets, np.inf)
+    witness = np.zeros((n_targets, width))
+
+    h = np.empty((n, n), dtype=np.complex128)
+    square = np.empty((n, n), dtype=np.complex128)
+    factor = np.zeros((n, n), dtype=np.complex128)
+    x = np.empty(n, dtype=np.complex128)
+    packed = np.empty(width)
+    f = np.empty(width)
+    target = np.empty(width)
+    margins = np.empty(n_columns)
+    one = np.ones(1)
+    pick = np.empty(1, dtype=np.int64)
+
+    limit = min(n_columns, max(48, 8 * n))
+    pool_sum = np.zeros((_POOL, width))
+    pool_terms = np.zeros(_POOL, dtype=np.int64)
+    pool_index = np.zeros((_POOL, limit), dtype=np.int64)
+    pool_weight = np.zeros((_POOL, limit))
+    pool_entries = np.zeros(_POOL)
+    order = np.arange(_POOL)
+    filled = 0
+    extra_entries = largest_entry(extra)
+
+    for r in range(n_targets):
+        terms = 0
+        target_entries = largest_entry(targets[r])
+        for p in range(width):
+            target[p] = np.float64(targets[r, p]) - extra[p]
+
+        for slot in range(filled):
+            s = order[slot]
+            for p in range(width):
+                packed[p] = pool_sum[s, p] - target[p]
+            entries = pool_entries[s] + target_entries + extra_entries
+            if _covers(packed, entries, n, pool_terms[s] + 1.0, h, factor) == n:
+                how[r] = POOLED
+                terms = pool_terms[s]
+                _to_front(order, slot)
+                break
+
+        if how[r] == OPEN:
+            for k in range(n_columns):
+                margins[k] = np.inf
+            for q in range(probes.shape[0]):
+                wanted = _dot(target, probes[q])
+                row = probe_values[q]
+                for k in range(n_columns):
+                    margins[k] = min(margins[k], row[k] - wanted)
+            while True:
+                best = np.argmax(margins)
+                if not margins[best] >= 0.0:
+                    break
+                pick[0] = best
+                entries = combine(targets[r], extra, columns, pick, one, n, packed)
+                at = _covers(packed, entries, n, 2.0, h, factor)
+                if at < n and extra_entries == 0.0 and largest_entry(packed) == 0.0:
+                    at = n  # the very same matrix
+                if at == n:
+                    how[r] = SINGLE
+                    terms = 1
+                    _remember(
+                        pool_sum, pool_terms, pool_index, pool_weight, pool_entries, order, pick, one, columns
+                    )
+                    filled = min(filled + 1, _POOL)
+                    break
+                failing_direction(factor, n, at, x)
+                functional(x, n, gain, square, f)
+                wanted = _dot(target, f)
+                for k in range(n_columns):
+                    if margins[k] >= 0.0:
+                        margins[k] = min(margins[k], _dot(columns[k], f) - wanted)
+                margins[best] = -np.inf
+
+        if how[r] == OPEN and convex:
+            for k in range(n_columns):
+                margins[k] = np.inf
+            for q in range(probes.shape[0]):
+                wanted = _dot(target, probes[q])
+                row = probe_values[q]
+                for k in range(n_columns):
+                    margins[k] = min(margins[k], row[k] - wanted)
+            status, m, chosen, c, upper = convex_weights(
+                columns, columns_t, target, margins, scale, n, gain, limit, witness[r]
+            )
+            bound[r] = upper
+            if status == FOUND:
+                entries = combine(targets[r], extra, columns, chosen[:m], c[:m], n, packed)
+                if _covers(packed, entries, n, m + 1.0, h, factor) == n:
+                    how[r] = COMBINED
+                    terms = m
+                    _remember(
+                        pool_sum,
+                        pool_terms,
+                        pool_index,
+                        pool_weight,
+                        pool_entries,
+                        order,
+                        chosen[:m],
+                        c[:m],
+                        columns,
+                    )
+                    filled = min(filled + 1, _POOL)
+        if how[r] != OPEN:
+            bound[r] = np.inf
+            for p in range(width):
+                witness[r, p] = 0.0
+
+        first = starts[r]
+        starts[r + 1] = first + terms
+        if first + terms > index.shape[0]:
+            index = _grown(index, first + terms)
+            weight = _grown(weight, first + terms)
+        s = order[0]
+        for t in range(terms):
+            index[first + t] = pool_index[s, t]
+            weight[first + t] = pool_weight[s, t]
+    total = starts[n_targets]
+    return how, starts, index[:total].copy(), weight[:total].copy(), bound, witness
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _grown(values, needed):
+    out = np.empty(2 * needed, dtype=values.dtype)
+    out[: values.shape[0]] = values
+    return out
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _remember(sums, terms, index, weight, entries, order, chosen, c, columns):
+    """Put a combination into the least recently used slot, and that slot to the front."""
+    _to_front(order, order.shape[0] - 1)
+    s = order[0]
+    m = chosen.shape[0]
+    terms[s] = m
+    entries[s] = 0.0
+    for p in range(sums.shape[1]):
+        sums[s, p] = 0.0
+    for t in range(m):
+        index[s, t] = chosen[t]
+        weight[s, t] = c[t]
+        column = columns[chosen[t]]
+        entries[s] += c[t] * largest_entry(column)
+        for p in range(sums.shape[1]):
+            sums[s, p] += c[t] * np.float64(column[p])
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def leading_excitations(rows, n, steps, out):
+    """out[r] (n,) ≈ unit eigenvector of the largest eigenvalue of rows[r], by ``steps`` power steps."""
+    h = np.empty((n, n), dtype=np.complex128)
+    y = np.empty(n, dtype=np.complex128)
+    for r in range(rows.shape[0]):
+        unpack_row(rows[r], n, h)
+        largest = 0
+        for i in range(n):
+            if h[i, i].real > h[largest, largest].real:
+                largest = i
+        x = out[r]
+        for i in range(n):
+            x[i] = h[i, largest]
+        for _ in range(steps):
+            norm = 0.0
+            for i in range(n):
+                norm += x[i].real ** 2 + x[i].imag ** 2
+            if not norm > 0.0:
+                x[:] = 0.0
+                x[largest] = 1.0
+                break
+            norm = 1.0 / np.sqrt(norm)
+            for i in range(n):
+                x[i] *= norm
+            for i in range(n):
+                total = 0.0j
+                for j in range(n):
+                    total += h[i, j] * x[j]
+                y[i] = total
+            for i in range(n):
+                x[i] = y[i]
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def functionals(x, n, gain, out):
+    """Packed functionals (P, n²) of excitations (P, n), scaled to unit length; zero stays zero."""
+    square = np.empty((n, n), dtype=np.complex128)
+    for r in range(x.shape[0]):
+        norm = 0.0
+        for i in range(n):
+            norm += x[r, i].real ** 2 + x[r, i].imag ** 2
+        functional(x[r], n, gain, square, out[r])
+        if norm > 0.0:
+            for p in range(n * n):
+                out[r, p] /= norm
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def values_on(rows, f, out):
+    """out[r] = rows[r] @ f for (R, n²) float32 rows; fixed order."""
+    for r in range(rows.shape[0]):
+        out[r] = _dot(rows[r], f)
