@@ -109,6 +109,10 @@ class SarModel:
     def digest(self) -> str:
         """SHA-256, hexadecimal, over metadata and all numbers; equal data digest equally."""
         sha = hashlib.sha256(self.metadata.to_json().encode())
+        if self.cubes is not None:
+            c = self.cubes
+            sha.update(repr((c.rule, c.notes, c.average_mass_kg)).encode())
+        sha.update(repr(sorted(self.global_units.items())).encode())
         for rows in self.chunks():
             sha.update(np.ascontiguousarray(rows).data)
         for name, values in self._extra_datasets():

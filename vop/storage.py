@@ -121,6 +121,19 @@ def file_digest(path: str | os.PathLike[str]) -> str:
         raise InputError(f"cannot read {path}: {error.strerror or error}") from error
 
 
+#: What the HDF5 library and h5py raise, by experiment with mutated files, when a file is damaged.
+_DAMAGE = (
+    OSError,
+    RuntimeError,
+    ValueError,
+    TypeError,
+    AttributeError,
+    IndexError,
+    OverflowError,
+    NotImplementedError,
+)
+
+
 @contextmanager
 def open_hdf5(path: str | os.PathLike[str]) -> Iterator[h5py.File]:
     """Open an HDF5 file for reading; every fault inside becomes an InputError that names it.
@@ -135,12 +148,12 @@ def open_hdf5(path: str | os.PathLike[str]) -> Iterator[h5py.File]:
     try:
         with h5py.File(path, "r") as handle:
             yield handle
-    except (OSError, RuntimeError) as error:
-        why = str(error).splitlines()[0]
-        raise InputError(f"{path}: not readable as HDF5 (missing, truncated or damaged): {why}") from error
     except KeyError as error:
         why = str(error.args[0]) if error.args else "unknown"
         raise InputError(f"{path}: lacks an expected item: {why}") from error
+    except _DAMAGE as error:
+        why = (str(error) or type(error).__name__).splitlines()[0]
+        raise InputError(f"{path}: not readable as HDF5 (missing, truncated or damaged): {why}") from error
 
 
 def write_header(handle: h5py.File, kind: str, version: int, metadata: Metadata) -> None:

@@ -88,6 +88,7 @@ class VopSet:
         """SHA-256, hexadecimal, over metadata, bound and all numbers."""
         sha = hashlib.sha256(self.metadata.to_json().encode())
         sha.update(repr(sorted(self._scalars().items())).encode())
+        sha.update(repr(sorted(self.global_units.items())).encode())
         for name, values in self._datasets():
             sha.update(name.encode())
             sha.update(np.ascontiguousarray(values).data)
