@@ -127,7 +127,7 @@ def test_an_unproved_set_exits_with_one_and_is_not_handed_off(job_folder: Path) 
     [
         (("run", "missing.toml"), "missing.toml"),
         (("compress", "missing.h5"), "missing.h5"),
-        (("model", "empty"), "no reader recognises"),
+        (("model", "empty", "-o", "new.h5"), "no reader recognises"),
         (("compress", "model.h5", "--overestimation", "0"), "overestimation"),
         (("compress", "model.h5", "--overestimation", "nan"), "overestimation"),
         (("compress", "model.h5", "--method", "magic"), "magic"),

@@ -124,7 +124,8 @@ def job_summary(
     """The text of summary.txt: open warnings first, then what was read, made, proved, handed off."""
     details = model.metadata.details
     domain = model.metadata.domain
-    read = details.get("source", {})
+    read = details["source"]
+    stated = read["conventions"]
     lines = [
         f"vop {__version__}: summary of {job.file.name}",
         "",
@@ -135,11 +136,10 @@ def job_summary(
         "READ",
         f"  path        {job.input_path.name}",
         *(
-            f"  {name:<12}{value} (stated by {read['conventions']['stated_by'].get(name, 'caller')})"
-            for name, value in read.get("conventions", {}).items()
-            if name != "stated_by"
+            f"  {name:<12}{stated[name]} (stated by {stated['stated_by'].get(name, 'caller')})"
+            for name in ("phasor", "time_sign", "reference")
         ),
-        *(f"  file        {name}  SHA-256 {value}" for name, value in read.get("files", {}).items()),
+        *(f"  file        {name}  SHA-256 {value}" for name, value in sorted(read["files"].items())),
         f"  domain      coil {domain.coil}; plug {domain.plug}; B0 {domain.b0_direction}; "
         f"bodies {_listed(domain.bodies)}; positions {_listed(domain.positions)}; "
         f"limits {domain.limits_mode}; expiry {domain.expiry}",
