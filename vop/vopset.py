@@ -53,6 +53,12 @@ class VopSet:
     global_matrices: Mapping[str, np.ndarray] = field(default_factory=dict)
     global_units: Mapping[str, str] = field(default_factory=dict)
 
+    def __post_init__(self) -> None:
+        from vop.hermitian import pack, unpack
+
+        # Through the packed form, as after reading a file: equal sets export to equal bytes.
+        object.__setattr__(self, "overestimation_matrix", unpack(pack(self.overestimation_matrix)))
+
     def __len__(self) -> int:
         return int(self.packed.shape[0])
 
