@@ -49,7 +49,7 @@ def frobenius(packed: np.ndarray) -> np.ndarray:
         Names the first row that holds NaN or infinity.
     """
     n_rows, width = packed.shape
-    gain = inner_weights(int(round(width**0.5)))
+    gain = inner_weights(round(width**0.5))
     norms = np.empty(n_rows)
     for start in range(0, n_rows, CHUNK_ROWS):
         rows = np.ascontiguousarray(packed[start : start + CHUNK_ROWS])
@@ -71,7 +71,7 @@ def worst_case(packed: np.ndarray, norms: np.ndarray) -> tuple[float, int]:
     -------
     (value, row) : value ≤ λmax(Q_row) is proved; W/kg per |w|².
     """
-    n = int(round(packed.shape[1] ** 0.5))
+    n = round(packed.shape[1] ** 0.5)
     best, best_row = -np.inf, -1
     for row in np.argsort(-norms, kind="stable"):
         if norms[row] * (1 + 1e-12) < best:
@@ -161,7 +161,7 @@ class Coordinates:
             Where the hair would eat half of ε: too small an ε for float32 files, or S too
             ill-conditioned.
         """
-        n = int(round(packed.shape[1] ** 0.5))
+        n = round(packed.shape[1] ** 0.5)
         scalar = float(s_row[0])
         if np.array_equal(s_row, scalar * identity(n)):
             units = worst / scalar + epsilon
@@ -181,7 +181,7 @@ class Coordinates:
 
     def back(self, delivered: np.ndarray) -> np.ndarray:
         """Delivered matrices (K, n²) float64 of a method, as stored: (K, n²) float32, hair added."""
-        n = int(round(delivered.shape[1] ** 0.5))
+        n = round(delivered.shape[1] ** 0.5)
         out = np.array(delivered, dtype=np.float64, order="C")
         if self.root is not None:
             out = np.empty_like(delivered)

@@ -99,10 +99,7 @@ def compress(
     key = digest(__version__, model.digest(), method, s_row.tobytes())
     saved = Checkpoint(checkpoint, key)
     task = _Task(run, model.packed, n, s_row, worst, saved, progress)
-    if limit is None:
-        answer = task.at(epsilon, None)
-    else:
-        answer = _fewest_bound(task, epsilon, limit)
+    answer = task.at(epsilon, None) if limit is None else _fewest_bound(task, epsilon, limit)
     record = {
         "method": method,
         "n_matrices": len(model),
