@@ -26,7 +26,7 @@ from vop.cubes import CubeGeometry
 from vop.errors import InputError
 from vop.grid import RectilinearGrid
 from vop.metadata import Metadata, Reference
-from vop.storage import atomic_path, open_hdf5, read_header, write_header
+from vop.storage import create_hdf5, open_hdf5, read_header, write_header
 
 FORMAT = "vop-sar-model"
 FORMAT_VERSION = 1
@@ -142,7 +142,7 @@ class SarModel:
         OutputError
             If ``path`` exists and not ``force``, or cannot be written.
         """
-        with atomic_path(path, force) as temporary, h5py.File(temporary, "w") as handle:
+        with create_hdf5(path, force) as handle:
             write_header(handle, FORMAT, FORMAT_VERSION, self.metadata)
             handle.attrs["digest"] = self.digest()
             rows = handle.create_dataset("local/packed", self.packed.shape, np.float32)
@@ -166,16 +166,15 @@ class SarModel:
 
         Parameters
         ----------
-        verify : recompute the digest (one pass over the file).
+        verify : check the seal over the whole file (one pass).
 
         Raises
         ------
         InputError
-            Where the file is no model, of an unknown version, damaged, or its digest is wrong.
+            Where the file is no model, of an unknown version, damaged or altered.
         """
-        with open_hdf5(path) as handle:
+        with open_hdf5(path, sealed=verify) as handle:
             metadata = read_header(handle, FORMAT, FORMAT_VERSION)
-            wanted = handle.attrs.get("digest")
             packed = _map_rows(handle, "local/packed", len(metadata.channel_names) ** 2)
             cubes = _read_cubes(handle, packed.shape[0]) if "cubes" in handle else None
             matrices, units = {}, {}
@@ -184,10 +183,7 @@ class SarModel:
                     raise InputError(f"{path}: global/{name} has shape {dataset.shape}")
                 matrices[name] = dataset[()].astype(np.complex128)
                 units[name] = str(dataset.attrs.get("unit", "not stated"))
-        model = cls(packed, metadata, cubes, matrices, units)
-        if verify and model.digest() != wanted:
-            raise InputError(f"{path}: the digest does not fit the contents; the file was altered or damaged")
-        return model
+        return cls(packed, metadata, cubes, matrices, units)
 
 
 def _map_rows(handle: h5py.File, name: str, width: int) -> np.ndarray:

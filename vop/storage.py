@@ -121,6 +121,49 @@ def file_digest(path: str | os.PathLike[str]) -> str:
         raise InputError(f"cannot read {path}: {error.strerror or error}") from error
 
 
+#: Trailer of our own HDF5 files: a SHA-256 over every byte before it. HDF5 ignores what follows its own
+#: end; we check it before the HDF5 library, which damaged files can crash, sees a byte.
+_SEAL = b"\nsealed, SHA-256 "
+_SEAL_BYTES = len(_SEAL) + 64
+
+
+def seal(path: Path) -> None:
+    """Append the seal to a finished file."""
+    with open(path, "r+b") as handle:
+        found = hashlib.file_digest(handle, "sha256").hexdigest()
+        handle.seek(0, os.SEEK_END)
+        handle.write(_SEAL + found.encode("ascii"))
+
+
+def check_seal(path: str | os.PathLike[str]) -> None:
+    """Raise InputError unless the file ends with a seal that fits its bytes."""
+    try:
+        with open(path, "rb") as handle:
+            left = os.fstat(handle.fileno()).st_size - _SEAL_BYTES
+            sha = hashlib.sha256()
+            while left > 0 and (block := handle.read(min(left, 1 << 20))):
+                sha.update(block)
+                left -= len(block)
+            trailer = handle.read()
+    except FileNotFoundError as error:
+        raise InputError(f"{path}: no such file") from error
+    except OSError as error:
+        raise InputError(f"cannot read {path}: {error.strerror or error}") from error
+    if not trailer.startswith(_SEAL):
+        raise InputError(f"{path}: no file of this tool, or truncated: it does not end with its seal")
+    if trailer != _SEAL + sha.hexdigest().encode("ascii"):
+        raise InputError(f"{path}: the seal does not fit the contents; the file was altered or damaged")
+
+
+@contextmanager
+def create_hdf5(final: str | os.PathLike[str], force: bool = False) -> Iterator[h5py.File]:
+    """A new HDF5 file of ours: atomic (:func:`atomic_path`) and sealed (:func:`check_seal`)."""
+    with atomic_path(final, force) as temporary:
+        with h5py.File(temporary, "w") as handle:
+            yield handle
+        seal(temporary)
+
+
 #: What the HDF5 library and h5py raise, by experiment with mutated files, when a file is damaged.
 _DAMAGE = (
     OSError,
@@ -135,8 +178,12 @@ _DAMAGE = (
 
 
 @contextmanager
-def open_hdf5(path: str | os.PathLike[str]) -> Iterator[h5py.File]:
+def open_hdf5(path: str | os.PathLike[str], *, sealed: bool = False) -> Iterator[h5py.File]:
     """Open an HDF5 file for reading; every fault inside becomes an InputError that names it.
+
+    Parameters
+    ----------
+    sealed : the file is one of ours; check its seal first (one pass over its bytes).
 
     Raises
     ------
@@ -145,6 +192,8 @@ def open_hdf5(path: str | os.PathLike[str]) -> Iterator[h5py.File]:
     """
     if not Path(path).is_file():
         raise InputError(f"{path}: no such file")
+    if sealed:
+        check_seal(path)
     try:
         with h5py.File(path, "r") as handle:
             yield handle

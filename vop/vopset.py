@@ -25,7 +25,7 @@ import numpy as np
 
 from vop.errors import InputError
 from vop.metadata import Metadata
-from vop.storage import atomic_path, open_hdf5, read_header, require_finite, write_header
+from vop.storage import create_hdf5, open_hdf5, read_header, require_finite, write_header
 
 FORMAT = "vop-set"
 FORMAT_VERSION = 1
@@ -108,7 +108,7 @@ class VopSet:
         OutputError
             If ``path`` exists and not ``force``, or cannot be written.
         """
-        with atomic_path(path, force) as temporary, h5py.File(temporary, "w") as handle:
+        with create_hdf5(path, force) as handle:
             write_set(handle, self)
 
     @classmethod
@@ -120,7 +120,7 @@ class VopSet:
         InputError
             Where the file is no set, of an unknown version, damaged, or its digest is wrong.
         """
-        with open_hdf5(path) as handle:
+        with open_hdf5(path, sealed=True) as handle:
             found = read_set(handle)
             wanted = handle.attrs.get("digest")
         if found.digest() != wanted:

@@ -7,7 +7,7 @@ from pathlib import Path
 import h5py
 import numpy as np
 
-from vop.storage import open_hdf5
+from vop.storage import open_hdf5, seal
 from vop.vopset import VopSet, read_set, write_set
 
 SCHEMA = """\
@@ -31,10 +31,11 @@ class Hdf5Exporter:
         with h5py.File(path, "w") as handle:
             write_set(handle, vop_set)
             handle.attrs["schema"] = SCHEMA
+        seal(path)
 
     def read_matrices(self, path: Path) -> np.ndarray:
         """See :class:`vop.plugins.Exporter`."""
-        with open_hdf5(path) as handle:
+        with open_hdf5(path, sealed=True) as handle:
             return read_set(handle).matrices
 
 

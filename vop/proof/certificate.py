@@ -23,7 +23,7 @@ from vop.errors import InputError
 from vop.metadata import Metadata
 from vop.proof.cover import Cover
 from vop.proof.worst_case import Attained
-from vop.storage import atomic_path, open_hdf5, read_header, write_header
+from vop.storage import create_hdf5, open_hdf5, read_header, write_header
 
 FORMAT = "vop-certificate"
 FORMAT_VERSION = 1
@@ -58,7 +58,7 @@ class Certificate:
         OutputError
             If ``path`` exists and not ``force``, or cannot be written.
         """
-        with atomic_path(path, force) as temporary, h5py.File(temporary, "w") as handle:
+        with create_hdf5(path, force) as handle:
             write_header(handle, FORMAT, FORMAT_VERSION, metadata)
             handle.attrs["set_digest"] = self.set_digest
             handle.attrs["model_digest"] = self.model_digest
@@ -79,7 +79,7 @@ class Certificate:
             Where the file is no certificate, of an unknown version, damaged, of other sizes, or a
             row of weights is not a convex combination exactly.
         """
-        with open_hdf5(path) as handle:
+        with open_hdf5(path, sealed=True) as handle:
             read_header(handle, FORMAT, FORMAT_VERSION)
             covers = []
             for name, rows, columns in zip(
