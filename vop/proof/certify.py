@@ -9,9 +9,9 @@ import numpy as np
 from vop.errors import VopError
 from vop.hermitian import channels_from_width
 from vop.kernels.proof_psd import certify, keeps_small_numbers
+from vop.parallel import map_chunks
 from vop.progress import Progress
 from vop.proof.cover import WEIGHT_BITS, Cover
-from vop.proof.parallel import map_chunks
 
 #: Targets at a time; fixed.
 _CHUNK = 1 << 13
