@@ -23,8 +23,12 @@ _CLOSEST = 4
 #: Closest calls kept, and local maxima confirmed against the whole model.
 _KEPT = 64
 #: One covariance, and one local maximisation, for so many excitations; and the maximisation's steps.
-_PER_COVARIANCE, _PER_ASCENT, _STEPS = 8, 64, 60
-_ASCENTS_AT_ONCE = 64
+_PER_COVARIANCE, _PER_ASCENT, _STEPS = 8, 128, 80
+#: Short local maximisations that choose where the long ones start, for each of those.
+_TRIALS_PER_ASCENT, _TRIAL_STEPS = 4, 12
+_ASCENTS_AT_ONCE, _AT_ONCE = 64, 1 << 13
+#: Rounds of "excess over the matrix that the model has its maximum at".
+_EXCESS_ROUNDS = 3
 
 
 def attack(
@@ -46,8 +50,8 @@ def attack(
 
     Parameters
     ----------
-    n_excitations : how many to draw; an eighth as many covariances and a 64th as many local
-        maximisations come on top.
+    n_excitations : how many to draw; three for each VOP, an eighth as many covariances, and a
+        128th as many local maximisations come on top.
     seed : of everything random.
 
     Raises
@@ -84,9 +88,13 @@ class _Attack:
         nothing = np.zeros((self.n, 1), dtype=np.complex128)
         self.largest, self.use = (-np.inf, nothing), (-np.inf, nothing)
         self.n_ascents = 0
+        self._columns = np.array(vop_set.packed, dtype=np.float32, order="C")
+        self._across = np.ascontiguousarray(self._columns.T.astype(np.float64))
+        self._gain = inner_weights(self.n)
 
     def run(self, n_excitations: int) -> AttackResult:
         single, averaged = _Calls(), _Calls()
+        n_from_vops = self._sweep_vops(single)
         self._sweep("attack: excitations", n_excitations, self.draw.excitations, single)
         n_ascents = max(_KEPT, n_excitations // _PER_ASCENT)
         self._ascend(n_ascents, 1, single)
@@ -99,7 +107,7 @@ class _Attack:
         averaged.add(*closest)
         closest_averaged = averaged.items[0]
         return AttackResult(
-            n_excitations=n_excitations,
+            n_excitations=n_excitations + n_from_vops,
             n_covariances=n_covariances,
             n_ascents=self.n_ascents,
             smallest_ratio=closest[0],
@@ -138,38 +146,68 @@ class _Attack:
                     self.use = (float(use), factor)
 
     def _ascend(self, count: int, rank: int, calls: _Calls) -> None:
-        """Maximise SAR(model)/SAR(set) from the closest calls and from matrices spread over the model."""
-        kept = list(calls.items)
-        rows = np.array([row for _, row, _ in kept], dtype=np.int64)
-        spread = np.arange(max(count - len(kept), 0), dtype=np.int64)
-        # Once each matrix has had its turn, the next-lower eigenvector has.
-        lower = spread // len(self.model)
-        spread_rows = (
-            spread * len(self.model) // max(len(spread), 1) if not lower.any() else spread % len(self.model)
-        )
-        all_rows = np.concatenate([rows, spread_rows])
-        columns = np.array(self.set.packed, dtype=np.float32, order="C")
-        across = np.ascontiguousarray(columns.T.astype(np.float64))
-        gain = inner_weights(self.n)
+        """Maximise SAR(model)/SAR(set) from the closest calls and from eigenvectors of matrices.
+
+        Eigenvectors of matrices spread over the model get a few steps first; the best go on.
+        """
+        chosen, starts = self._screened(count, rank)
+        for _, row, factor in calls.items:
+            start = np.zeros((self.n, rank), dtype=np.complex128)
+            start[:, : factor.shape[1]] = factor
+            chosen.append(row)
+            starts.append(start)
+        best, ratio = self._run("attack: maximising", np.array(chosen), np.array(starts), _STEPS)
+        self._confirm(best[np.argsort(ratio, kind="stable")[:_KEPT]], calls)
+
+    def _screened(self, count: int, rank: int) -> tuple[list[int], list[np.ndarray]]:
+        n_matrices, n_trials = len(self.model), count * _TRIALS_PER_ASCENT
+        turns = min(-(-n_trials // n_matrices), self.n if rank == 1 else 1)
+        per_turn = min(n_trials, n_matrices)
+        rows = np.arange(per_turn) * n_matrices // per_turn
+        found, places, starts = [], [], []
+        for turn in range(turns):
+            start = np.concatenate(
+                [self._eigenvectors(rows[a : a + _AT_ONCE], rank, turn) for a in range(0, per_turn, _AT_ONCE)]
+            )
+            best, ratio = self._run("attack: screening", rows, start, _TRIAL_STEPS)
+            found.append(ratio)
+            places.append(rows)
+            starts.append(best)
+        order = np.argsort(np.concatenate(found), kind="stable")[:count]
+        return list(np.concatenate(places)[order]), list(np.concatenate(starts)[order])
+
+    def _eigenvectors(self, rows: np.ndarray, rank: int, turn: int) -> np.ndarray:
+        values, vectors = np.linalg.eigh(unpack(self.model.packed[rows]))
+        if rank == 1:
+            return vectors[:, :, -1 - turn, None]
+        spread = values.clip(min=0) + 0.05 * values[:, -1:]
+        return vectors * np.sqrt(spread)[:, None, :]
+
+    def _run(
+        self, label: str, rows: np.ndarray, start: np.ndarray, steps: int
+    ) -> tuple[np.ndarray, np.ndarray]:
+        self.n_ascents += len(rows)
 
         def work(first: int, last: int) -> tuple[np.ndarray, np.ndarray]:
-            matrices = np.array(self.model.packed[all_rows[first:last]], dtype=np.float32, order="C")
-            start = np.zeros((last - first, self.n, rank), dtype=np.complex128)
-            values, vectors = np.linalg.eigh(unpack(matrices))
-            for i in range(last - first):
-                if first + i < len(kept):
-                    factor = kept[first + i][2]
-                    start[i, :, : factor.shape[1]] = factor[:, :rank]
-                elif rank == 1:
-                    start[i, :, 0] = vectors[i][:, -1 - lower[first + i - len(kept)] % self.n]
-                else:
-                    start[i] = vectors[i] * np.sqrt(values[i].clip(min=0) + 0.05 * values[i, -1])
-            best, ratio = np.zeros_like(start), np.empty(last - first)
-            ascend(matrices, columns, across, start, _STEPS, gain, best, ratio)
+            part = np.ascontiguousarray(start[first:last])
+            best, ratio = np.zeros_like(part), np.empty(last - first)
+            matrices = np.array(self.model.packed[rows[first:last]], dtype=np.float32, order="C")
+            ascend(matrices, self._columns, self._across, part, steps, self._gain, best, ratio)
             return best, ratio
 
-        parts = map_chunks("attack: maximising", len(all_rows), _ASCENTS_AT_ONCE, work, self.progress)
-        best = np.concatenate([part[0] for part in parts])
-        ratio = np.concatenate([part[1] for part in parts])
-        self.n_ascents += len(ratio)
-        self._confirm(best[np.argsort(ratio, kind="stable")[:_KEPT]], calls)
+        parts = map_chunks(label, len(rows), _ASCENTS_AT_ONCE, work, self.progress)
+        return np.concatenate([p[0] for p in parts]), np.concatenate([p[1] for p in parts])
+
+    def _sweep_vops(self, calls: _Calls) -> int:
+        """Where each VOP overestimates most: its own peaks, and those of its excess over the model."""
+        count = 0
+        for first in range(0, len(self.set), _BATCH):
+            vops = unpack(self.set.packed[first : first + _BATCH])
+            peaks = np.linalg.eigh(vops)[1][:, :, -1:]
+            for _ in range(_EXCESS_ROUNDS):
+                _, _, rows = self.evaluate.double(functionals_of(peaks))
+                self._confirm(peaks, calls)
+                count += len(peaks)
+                peaks = np.linalg.eigh(vops - unpack(self.model.packed[rows]))[1][:, :, -1:]
+            self.progress("attack: VOPs", min(first + _BATCH, len(self.set)), len(self.set))
+        return count
