@@ -103,6 +103,16 @@ def identity(n: int) -> np.ndarray:
     return np.concatenate([np.ones(n), np.zeros(n * (n - 1))])
 
 
+def packed_entries(n: int) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """What each of the n² packed numbers is: row i, column j (int64) and whether the imaginary part."""
+    rows, columns = np.triu_indices(n, 1)
+    diagonal = np.arange(n)
+    first = np.concatenate([diagonal, rows, rows])
+    second = np.concatenate([diagonal, columns, columns])
+    imaginary = np.arange(n * n) >= n + len(rows)
+    return first, second, imaginary
+
+
 @njit(cache=True, inline="always")
 def unpack_row(row, n, out):
     """Write one packed row (n²,) into ``out`` (n, n) complex128 (numba)."""

@@ -1,0 +1,1 @@
+"""Averaging cubes: found from the tissue alone, then applied to any density."""
