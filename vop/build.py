@@ -148,11 +148,11 @@ def _tile_matrices(
     source: FieldSource, tile: _Tile, cubes: CubeGeometry, combine: str, absorbed: np.ndarray
 ) -> np.ndarray:
     out = np.empty((len(cubes), source.n_channels**2))
-    edges = [e[s.start : s.stop + 1] for e, s in zip(source.grid.edges_m, tile.around, strict=True)]
+    ez, ey, ex = (e[s.start : s.stop + 1] for e, s in zip(source.grid.edges_m, tile.around, strict=True))
     boxes, scale = np.ascontiguousarray(cubes.box_m), 1.0 / cubes.mass_kg
     for part, table in _tables(source, tile.around, tile.core, combine, absorbed):
         block = np.empty((len(cubes), table.shape[0]))
-        boxes_from_tables(table, *edges, boxes, scale, block)
+        boxes_from_tables(table, ez, ey, ex, boxes, scale, block)
         out[:, part] = block
     return out
 

@@ -102,6 +102,12 @@ class SarModel:
 
         return unpack(np.asarray(self.packed[index]))
 
+    def sar_map(self, w: np.ndarray) -> np.ndarray:
+        """Averaged SAR of every voxel for one excitation, W/kg: :func:`vop.exposure.sar_map`."""
+        from vop.exposure import sar_map
+
+        return sar_map(self, w)
+
     def with_metadata(self, metadata: Metadata) -> SarModel:
         """The same matrices under other metadata."""
         return replace(self, metadata=metadata)

@@ -84,7 +84,8 @@ class EdgeHdf5Source(FieldSource):
                 # One sample fewer along the component's own axis: the last plane stays zero.
                 part = tuple(slice(s.start, s.stop - (a == axis)) for a, s in enumerate(box))
                 values = group[name][part]
-                out[(component, *(slice(0, size) for size in values.shape))] = values
+                nz, ny, nx = values.shape
+                out[component, :nz, :ny, :nx] = values
         return out
 
 

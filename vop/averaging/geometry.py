@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from vop.averaging.apply import box_integrals
 from vop.cubes import CubeGeometry, CubeKind, VoxelStatus
 from vop.errors import InputError
 from vop.fields import Tissue
@@ -43,7 +44,7 @@ def find_cubes(
     """
     body = tissue.body
     voxels = np.argwhere(body)
-    flat = np.ravel_multi_index(tuple(voxels.T), grid.shape).astype(np.int64)
+    flat: np.ndarray = np.flatnonzero(body)
     if average_mass_kg is None:
         return _points(grid, tissue, voxels, flat)
     if not (np.isfinite(average_mass_kg) and average_mass_kg > 0):
@@ -133,12 +134,10 @@ def find_cubes(
         )
         notes.append(
             f"WARNING: the body holds less than {average_mass_kg:g} kg around {lost_count} voxels; "
-            "they keep their point SAR, which is never smaller than an average over tissue"
+            "they keep their point SAR, the largest of which no average over them exceeds"
         )
     status = np.zeros(grid.shape, np.uint8)
     status[tuple(voxels.T)] = status_of
-    from vop.averaging.apply import box_integrals
-
     return CubeGeometry(
         grid=grid,
         status=status,
