@@ -33,9 +33,9 @@ class DemoArray:
 
     n_channels: int = 8
     radius_m: float = 0.073
-    gap_m: tuple[float, float] = (0.007, 0.013)
-    length_m: float = 0.090
-    n_elements: int = 9
+    gap_m: tuple[float, float] = (0.012, 0.014)
+    length_m: float = 0.140
+    n_elements: int = 14
     frequency_hz: float = 297.2e6
     seed: int = 7
 

@@ -18,7 +18,7 @@ NOTE = (
     "INVENTED DATA. Computed from an invented array around an invented, ball-shaped body part; nothing "
     "was measured, nothing is of a real body or device. Not for use on people."
 )
-#: Degrees of the harmonics; at 7 mm from the skin of a 73 mm ball the last is 2e-4 of the first there.
+#: Degrees of the harmonics; at 12 mm from the skin of a 73 mm ball the last is 1e-6 of the first there.
 _DEGREES = 90
 #: Points per call of the field sum; only progress depends on it.
 _STEP = 8192
