@@ -45,7 +45,7 @@ if TYPE_CHECKING:
     from vop.fields import FieldSource
     from vop.handoff import export
     from vop.plugins import open_fields
-    from vop.proof import prove
+    from vop.proof.prove import prove
     from vop.sarmodel import SarModel
     from vop.vopset import VopSet
 
