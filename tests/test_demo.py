@@ -10,7 +10,9 @@ import numpy as np
 import pytest
 
 import vop
-from vop.demo import DemoArray, write_demo
+from vop.demo import DemoArray, Solution, write_demo
+from vop.demo.array import decoupled_currents, resistance_matrix
+from vop.demo.layered_sphere import free_space_field
 from vop.errors import OutputError
 
 SMALL = DemoArray(n_channels=3, n_elements=4, length_m=0.08)
@@ -39,13 +41,24 @@ def test_the_export_states_its_conventions_and_the_job_reads(folder: Path) -> No
     assert not source.scattering.any()
 
 
-def test_absorbed_power_is_below_the_forward_power_and_near_what_the_solver_says(folder: Path) -> None:
-    # Conservation: accepted = radiated + absorbed, so that the voxel sum must lie below 1 W per W for
-    # every excitation; in a lossy ball this close most of it is absorbed.
+def test_absorbed_power_is_what_the_solver_says_but_for_the_staircase(folder: Path) -> None:
+    # Conservation: accepted (1 W per |w|², by construction) is radiated plus absorbed. Radiated power from
+    # the far field of the solver; voxels of 4 mm against a skin of 2.5 mm leave some per cent.
+    solution = Solution(SMALL.sphere(), 90)
+    elements, owner = SMALL.elements()
+    nodes, weights = np.polynomial.legendre.leggauss(24)
+    phi = 2 * np.pi * np.arange(48) / 48
+    sine = np.sqrt(1 - nodes**2)
+    parts = np.outer(sine, np.cos(phi)), np.outer(sine, np.sin(phi)), np.outer(nodes, np.ones(48))
+    unit, solid = np.stack(parts, -1).reshape(-1, 3), np.repeat(weights, 48) * 2 * np.pi / 48
+    far = 1e4
+    e = solution.field(elements, owner, 3, far * unit, scattered=True)
+    np.add.at(e, owner, free_space_field(solution.sphere.k0, solution.sphere.omega, elements, far * unit))
+    e = np.einsum("cd,cav->dav", decoupled_currents(resistance_matrix(solution, elements, owner)), e)
+    radiated = np.einsum("iav,jav,v->ij", e.conj(), e, solid) * far**2 / (2 * 376.730313668)
     model = vop.build_sar_model(vop.open_fields(folder / "export"))
-    values = np.linalg.eigvalsh(model.global_matrices["absorbed power"])
-    assert values[-1] <= 1.0
-    assert values[0] > 0.5
+    missing = np.eye(3) - radiated - model.global_matrices["absorbed power"]
+    assert np.abs(np.linalg.eigvalsh(missing)).max() < 0.05
 
 
 def test_an_occupied_folder_is_refused(tmp_path: Path) -> None:
