@@ -95,17 +95,23 @@ class Conventions:
 
 @dataclass(frozen=True)
 class Reference:
-    """The excitation that w = 1 stands for: a quantity, a plane, an impedance, the other ports."""
+    """The excitation that w = 1 stands for: a quantity, a plane, an impedance, the other ports.
+
+    phasor : "peak" or "rms" where w are voltages or currents, a factor of two in SAR; powers have none.
+    """
 
     quantity: str
     plane: str = "not stated"
     z0_ohm: float | None = None
     other_ports: str = "not stated"
+    phasor: str = "not stated"
 
     def __post_init__(self) -> None:
         if self.quantity not in REFERENCES:
             choices = ", ".join(repr(k) for k in REFERENCES)
             raise ConventionError(f"reference {self.quantity!r} is not known; choose one of {choices}")
+        if self.phasor not in (*PHASORS, "not stated"):
+            raise ConventionError(f"phasor {self.phasor!r} of the excitation: state 'peak' or 'rms'")
 
     @property
     def unit(self) -> str:
