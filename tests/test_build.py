@@ -177,13 +177,13 @@ def test_a_used_voxel_takes_the_largest_of_the_valid_cubes_that_hold_it() -> Non
         assert found[k, j, i] == pytest.approx(sar[centred][holds].max(), rel=1e-12)
 
 
-def test_tiles_and_blocks_do_not_change_the_matrices(monkeypatch: pytest.MonkeyPatch) -> None:
+def test_tiles_do_not_change_the_matrices(monkeypatch: pytest.MonkeyPatch) -> None:
     from vop import build
 
     source = ArraySource(*_lumpy(9))
     whole = vop.build_sar_model(source, average_mass=0.0008)
     monkeypatch.setattr(build, "_LARGEST_TILE", 5)
-    monkeypatch.setattr(build, "_BLOCK", 7)
+    monkeypatch.setattr(build, "_SMALLEST_TILE", 4)
     parts = vop.build_sar_model(source, average_mass=0.0008)
     assert whole.cubes is not None
     assert parts.cubes is not None

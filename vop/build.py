@@ -4,10 +4,11 @@ from __future__ import annotations
 
 import itertools
 import os
-from collections.abc import Iterator
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
+from numba import get_num_threads
 
 from vop.averaging.geometry import STANDARD, find_cubes
 from vop.cubes import CubeGeometry
@@ -15,17 +16,16 @@ from vop.errors import InputError
 from vop.fields import SAMPLES, FieldSource
 from vop.grid import Box, RectilinearGrid
 from vop.hermitian import packed_entries, round_outward, unpack
-from vop.kernels.averaging import boxes_from_tables, power_table
+from vop.kernels.averaging import LANES, average_entries, signed_corners
 from vop.metadata import Domain, Metadata, Reference
 from vop.progress import Progress, silent
-from vop.sarmodel import SarModel
+from vop.sarmodel import SarModel, create_rows, write_model
+from vop.storage import create_hdf5, refuse_existing
 
 COMBINATIONS = ("outer", "field")
-#: Matrix entries whose summed volumes are held at a time.
-_BLOCK = 64
-#: Float64 numbers that the results of one tile may take; sets the size of tiles.
-_TILE_NUMBERS = 1 << 24
-_LARGEST_TILE = 48
+#: Memory for the fields of a tile, for its tables and for its results, each; sets the size of tiles.
+_BYTES = 400 << 20
+_LARGEST_TILE, _SMALLEST_TILE = 96, 8
 
 
 def build_sar_model(
@@ -34,7 +34,7 @@ def build_sar_model(
     *,
     rule: str = STANDARD,
     combine: str = "outer",
-    domain: Domain | None = None,
+    annotate: Callable[[SarModel], Metadata] | None = None,
     path: str | os.PathLike[str] | None = None,
     force: bool = False,
     progress: Progress = silent,
@@ -51,8 +51,8 @@ def build_sar_model(
     combine : where several samples of a component belong to a cell (nodes, edges): "outer" averages
         their outer products, "field" the complex samples first. By convexity the first is never
         smaller in the semidefinite order, hence the default.
-    domain : domain of use to record.
-    path : write the model there and return it mapped from disk; else it stays in memory.
+    annotate : gets the finished model and returns its final metadata; what it raises stops the build.
+    path : write the model there, tile by tile, and return it mapped from disk; else it stays in memory.
 
     Raises
     ------
@@ -63,43 +63,58 @@ def build_sar_model(
     """
     if combine not in COMBINATIONS:
         raise InputError(f"combine {combine!r} is not known; choose one of {', '.join(COMBINATIONS)}")
+    if path is not None:
+        refuse_existing(path, force)
     cubes = find_cubes(source.grid, source.tissue, average_mass, rule, progress)
     tiles = _tiles(source, cubes)
     cubes = cubes.take(np.concatenate([t.rows for t in tiles]))
-    n = source.n_channels
-    rows = np.empty((len(cubes), n * n), np.float32)
-    absorbed = np.zeros(n * n)
-    at = 0
-    for done, tile in enumerate(tiles):
-        count = len(tile.rows)
-        here = _tile_matrices(source, tile, cubes.take(np.arange(at, at + count)), combine, absorbed)
-        rows[at : at + count] = round_outward(here)
-        at += count
-        progress("local matrices", done + 1, len(tiles))
-    model = SarModel(
-        packed=rows,
-        metadata=_metadata(source, cubes, combine, domain),
-        cubes=cubes,
-        global_matrices={"absorbed power": unpack(absorbed)},
-        global_units={"absorbed power": "W per |w|^2"},
-    )
+    shape = (len(cubes), source.n_channels**2)
+
+    def finish(rows: np.ndarray) -> SarModel:
+        absorbed = _fill(rows, source, tiles, cubes, combine, progress)
+        model = SarModel(
+            packed=rows,
+            metadata=_metadata(source, cubes, combine),
+            cubes=cubes,
+            global_matrices={"absorbed power": unpack(absorbed)},
+            global_units={"absorbed power": "W per |w|^2"},
+        )
+        return model if annotate is None else model.with_metadata(annotate(model))
+
     if path is None:
-        return model
-    model.save(path, force)
+        return finish(np.empty(shape, np.float32))
+    with create_hdf5(path, force) as handle:
+        write_model(handle, finish(create_rows(handle, shape)))
     return SarModel.load(path, verify=False)
 
 
 def absorbed_power(source: FieldSource, combine: str = "outer", progress: Progress = silent) -> np.ndarray:
     """∫ σ/2 conj(E_i) E_j dV over the body: (n, n) complex128, W per |w|²."""
-    n = source.n_channels
-    total = np.zeros(n * n)
-    tiles = _cores(source.grid, _LARGEST_TILE)
-    for done, core in enumerate(tiles):
-        if source.tissue.body[core].any():
-            for _ in _tables(source, core, core, combine, total):
-                pass
-        progress("absorbed power", done + 1, len(tiles))
-    return unpack(total)
+    none = find_cubes(source.grid, source.tissue, None).take(np.zeros(0, np.int64))
+    tiles = _tiles(source, none)
+    return unpack(_fill(np.empty((0, source.n_channels**2)), source, tiles, none, combine, progress))
+
+
+def _fill(
+    rows: np.ndarray,
+    source: FieldSource,
+    tiles: list[_Tile],
+    cubes: CubeGeometry,
+    combine: str,
+    progress: Progress,
+) -> np.ndarray:
+    """Write the matrices tile by tile into ``rows``; returns the packed absorbed power of the body."""
+    absorbed = np.zeros(source.n_channels**2)
+    at = 0
+    for done, tile in enumerate(tiles):
+        count = len(tile.rows)
+        here = _tile_matrices(source, tile, cubes.take(np.arange(at, at + count)), combine)
+        absorbed += here[-1]
+        if count:
+            rows[at : at + count] = round_outward(here[:-1])
+        at += count
+        progress("local matrices", done + 1, len(tiles))
+    return absorbed
 
 
 @dataclass(frozen=True, eq=False)
@@ -114,9 +129,22 @@ def _cores(grid: RectilinearGrid, size: int) -> list[Box]:
     return list(itertools.product(z, y, x))
 
 
+def _tile_size(source: FieldSource, cubes: CubeGeometry) -> int:
+    """Cells along the core of a tile: as large as the memory for fields, tables and results allows."""
+    n = source.n_channels
+    steps = min(float(np.diff(e).min()) for e in source.grid.edges_m)
+    reach = float((cubes.box_m[:, 1] - cubes.box_m[:, 0]).max(initial=0.0))
+    halo = int(np.ceil(reach / steps))
+    for size in range(_LARGEST_TILE, _SMALLEST_TILE, -4):
+        fields = (size + halo) ** 3 * 24 * n
+        tables = (size + halo) ** 3 * 8 * LANES
+        if max(fields, tables, size**3 * 8 * n**2) <= _BYTES:
+            return size
+    return _SMALLEST_TILE
+
+
 def _tiles(source: FieldSource, cubes: CubeGeometry) -> list[_Tile]:
-    grid, n = source.grid, source.n_channels
-    size = int(min(_LARGEST_TILE, max(8, (_TILE_NUMBERS / n**2) ** (1 / 3))))
+    grid, size = source.grid, _tile_size(source, cubes)
     counts = [-(-s // size) for s in grid.shape]
     k, j, i = np.unravel_index(cubes.voxel, grid.shape)
     tile_of = (k // size * counts[1] + j // size) * counts[2] + i // size
@@ -144,23 +172,9 @@ def _surrounding(grid: RectilinearGrid, core: Box, boxes: np.ndarray) -> Box:
     return tuple(out)  # type: ignore[return-value]
 
 
-def _tile_matrices(
-    source: FieldSource, tile: _Tile, cubes: CubeGeometry, combine: str, absorbed: np.ndarray
-) -> np.ndarray:
-    out = np.empty((len(cubes), source.n_channels**2))
-    ez, ey, ex = (e[s.start : s.stop + 1] for e, s in zip(source.grid.edges_m, tile.around, strict=True))
-    boxes, scale = np.ascontiguousarray(cubes.box_m), 1.0 / cubes.mass_kg
-    for part, table in _tables(source, tile.around, tile.core, combine, absorbed):
-        block = np.empty((len(cubes), table.shape[0]))
-        boxes_from_tables(table, ez, ey, ex, boxes, scale, block)
-        out[:, part] = block
-    return out
-
-
-def _tables(
-    source: FieldSource, around: Box, core: Box, combine: str, absorbed: np.ndarray
-) -> Iterator[tuple[slice, np.ndarray]]:
-    """Summed volumes of absorbed power, a block of entries at a time; adds the core's to ``absorbed``."""
+def _tile_matrices(source: FieldSource, tile: _Tile, cubes: CubeGeometry, combine: str) -> np.ndarray:
+    """Averaged matrices of a tile's cubes, and the absorbed power of its core as a last row: float64."""
+    around = tile.around
     e = _read(source, around)
     samples = SAMPLES[source.centring]
     if combine == "field" and source.centring != "cell":
@@ -168,18 +182,23 @@ def _tables(
     offsets = np.array([o for component in samples for o in component], dtype=np.int64)
     starts = np.cumsum([0, *(len(component) for component in samples)])
     weight = 0.5 * source.tissue.conductivity_s_m[around].astype(np.float64) * source.grid.volumes_m3(around)
-    weight[~source.tissue.body[around]] = 0.0
-    first, second, imaginary = packed_entries(source.n_channels)
-    inner = [slice(c.start - a.start, c.stop - a.start) for c, a in zip(core, around, strict=True)]
-    z0, z1, y0, y1, x0, x1 = (f(s) for s in inner for f in (lambda s: s.start, lambda s: s.stop))
-    for b in range(0, len(first), _BLOCK):
-        part = slice(b, b + _BLOCK)
-        table = np.empty((len(first[part]), *(s + 1 for s in weight.shape)))
-        power_table(e, offsets, starts, weight, first[part], second[part], imaginary[part], table)
-        t = table[:, (z0, z1)][:, :, (y0, y1)][:, :, :, (x0, x1)]
-        d = t[:, 1] - t[:, 0]
-        absorbed[part] += d[:, 1, 1] - d[:, 1, 0] - d[:, 0, 1] + d[:, 0, 0]
-        yield part, table
+    ez, ey, ex = (a[s.start : s.stop + 1] for a, s in zip(source.grid.edges_m, around, strict=True))
+    z, y, x = (a[[s.start, s.stop]] for a, s in zip(source.grid.edges_m, tile.core, strict=True))
+    boxes = np.vstack([cubes.box_m, np.concatenate([x, y, z])])
+    scale = np.append(1.0 / cubes.mass_kg, 1.0)
+    cell, corner_weight = np.empty((len(boxes), 3, 2), np.int64), np.empty((len(boxes), 3, 4))
+    signed_corners(ez, ey, ex, boxes, cell, corner_weight)
+    entries = packed_entries(source.n_channels)
+    padding = -len(entries[0]) % LANES
+    first, second, imaginary = (np.pad(a, (0, padding)) for a in entries)
+    shape = (*(s + 1 for s in weight.shape), LANES)
+    workers = max(1, min(get_num_threads(), 2 * _BYTES // (8 * int(np.prod(shape)))))
+    tables = np.empty((workers, *shape))
+    out = np.empty((len(boxes), len(first)))
+    average_entries(
+        e, offsets, starts, weight, first, second, imaginary, cell, corner_weight, scale, tables, out
+    )
+    return out[:, : len(entries[0])]
 
 
 def _read(source: FieldSource, around: Box) -> np.ndarray:
@@ -218,12 +237,12 @@ def _mean_samples(e: np.ndarray, samples: tuple[tuple[tuple[int, int, int], ...]
     return out.astype(np.complex64)
 
 
-def _metadata(source: FieldSource, cubes: CubeGeometry, combine: str, domain: Domain | None) -> Metadata:
+def _metadata(source: FieldSource, cubes: CubeGeometry, combine: str) -> Metadata:
     quantity = source.conventions.reference
     meta = Metadata(
         reference=Reference(quantity, z0_ohm=source.z0_ohm),
         channel_names=source.channel_names,
-        domain=domain or Domain(frequency_hz=float(source.frequency_hz)),
+        domain=Domain(frequency_hz=float(source.frequency_hz)),
         details={
             "source": source.describe(),
             "averaging": {

@@ -23,7 +23,7 @@ from vop.errors import InputError, OutputError
 from vop.fields import FieldSource
 from vop.handoff import export
 from vop.job import Job
-from vop.metadata import digest
+from vop.metadata import Metadata, digest
 from vop.plugins import EXPORTERS, find, open_fields
 from vop.progress import Progress, silent
 from vop.proof import prove, recheck
@@ -136,22 +136,27 @@ class _Chain:
             self._require_same(path, model.metadata.details.get("step"), key)
         else:
             domain = job.settle_domain(source.frequency_hz, getattr(source, "b0_direction", None))
-            model = build_sar_model(source, job.average_mass_kg, progress=self.progress, **job.model_options)
-            checks = self._check(model, source)
-            metadata = replace(model.metadata, domain=domain).with_details(
-                step=key, import_checks=checks.record(), import_check_lines=list(checks.lines)
-            )
-            missing = domain.not_stated()
-            if missing:
-                checks = replace(
-                    checks,
-                    warnings=(
-                        *checks.warnings,
-                        f"domain of use not stated: {', '.join(missing)} (under [domain])",
-                    ),
+
+            def annotate(made: SarModel) -> Metadata:
+                checks = self._check(made, source)
+                metadata = replace(made.metadata, domain=domain).with_warnings(*checks.warnings)
+                if missing := domain.not_stated():
+                    metadata = metadata.with_warnings(
+                        f"domain of use not stated: {', '.join(missing)} (under [domain])"
+                    )
+                return metadata.with_details(
+                    step=key, import_checks=checks.record(), import_check_lines=list(checks.lines)
                 )
-            model = model.with_metadata(metadata.with_warnings(*checks.warnings))
-            model.save(path, force=self.force)
+
+            model = build_sar_model(
+                source,
+                job.average_mass_kg,
+                annotate=annotate,
+                path=path,
+                force=self.force,
+                progress=self.progress,
+                **job.model_options,
+            )
         return model, tuple(model.metadata.details.get("import_check_lines", ()))
 
     def _check(self, model: SarModel, source: FieldSource) -> PowerChecks:

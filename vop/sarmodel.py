@@ -149,22 +149,12 @@ class SarModel:
             If ``path`` exists and not ``force``, or cannot be written.
         """
         with create_hdf5(path, force) as handle:
-            write_header(handle, FORMAT, FORMAT_VERSION, self.metadata)
-            handle.attrs["digest"] = self.digest()
-            rows = handle.create_dataset("local/packed", self.packed.shape, np.float32)
+            rows = create_rows(handle, self.packed.shape)
             at = 0
             for chunk in self.chunks():
                 rows[at : at + len(chunk)] = chunk
                 at += len(chunk)
-            for name, values in self._extra_datasets():
-                handle.create_dataset(name, data=values)
-            if self.cubes is not None:
-                group = handle["cubes"]
-                group.attrs["rule"] = self.cubes.rule
-                group.attrs["notes"] = "\n".join(self.cubes.notes)
-                group.attrs["average_mass_kg"] = self.cubes.average_mass_kg or 0.0
-            for name in self.global_matrices:
-                handle[f"global/{name}"].attrs["unit"] = self.global_units.get(name, "not stated")
+            write_model(handle, self)
 
     @classmethod
     def load(cls, path: str | os.PathLike[str], verify: bool = True) -> SarModel:
@@ -190,6 +180,26 @@ class SarModel:
                 matrices[name] = dataset[()].astype(np.complex128)
                 units[name] = str(dataset.attrs.get("unit", "not stated"))
         return cls(packed, metadata, cubes, matrices, units)
+
+
+def create_rows(handle: h5py.File, shape: tuple[int, ...]) -> h5py.Dataset:
+    """The dataset of packed matrices in a new file, to be filled by slices."""
+    return handle.create_dataset("local/packed", shape, np.float32)
+
+
+def write_model(handle: h5py.File, model: SarModel) -> None:
+    """Write all of a model but its rows, which :func:`create_rows` made and somebody filled."""
+    write_header(handle, FORMAT, FORMAT_VERSION, model.metadata)
+    handle.attrs["digest"] = model.digest()
+    for name, values in model._extra_datasets():
+        handle.create_dataset(name, data=values)
+    if model.cubes is not None:
+        group = handle["cubes"]
+        group.attrs["rule"] = model.cubes.rule
+        group.attrs["notes"] = "\n".join(model.cubes.notes)
+        group.attrs["average_mass_kg"] = model.cubes.average_mass_kg or 0.0
+    for name in model.global_matrices:
+        handle[f"global/{name}"].attrs["unit"] = model.global_units.get(name, "not stated")
 
 
 def _map_rows(handle: h5py.File, name: str, width: int) -> np.ndarray:

@@ -4,12 +4,11 @@ from __future__ import annotations
 
 import numpy as np
 
-from vop.averaging.apply import box_integrals
 from vop.cubes import CubeGeometry, CubeKind, VoxelStatus
 from vop.errors import InputError
 from vop.fields import Tissue
 from vop.grid import RectilinearGrid
-from vop.kernels.averaging import cumulate
+from vop.kernels.averaging import box_integrals, cumulate
 from vop.kernels.cube_search import centred_cubes, face_cubes, mark_used
 from vop.progress import Progress, silent
 
@@ -138,13 +137,15 @@ def find_cubes(
         )
     status = np.zeros(grid.shape, np.uint8)
     status[tuple(voxels.T)] = status_of
+    masses = np.empty(len(out_boxes))
+    box_integrals(mass, ez, ey, ex, out_boxes, masses)
     return CubeGeometry(
         grid=grid,
         status=status,
         voxel=served,
         kind=kind,
         box_m=out_boxes,
-        mass_kg=box_integrals(mass, grid, out_boxes),
+        mass_kg=masses,
         average_mass_kg=float(average_mass_kg),
         rule=rule,
         notes=tuple(notes),

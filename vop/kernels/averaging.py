@@ -10,6 +10,9 @@ from __future__ import annotations
 import numpy as np
 from numba import njit, prange
 
+#: Matrix entries that are handled side by side: one cache line of float64.
+LANES = 8
+
 
 @njit(cache=True, nogil=True)
 def cumulate(table):
@@ -79,57 +82,120 @@ def box_integral(table, ez, ey, ex, box):
     return high - low
 
 
-@njit(cache=True, nogil=True, parallel=True)
-def power_table(e, offsets, starts, weight, first, second, imaginary, table):
-    """Absorbed power of each cell and matrix entry, at [1:, 1:, 1:] of ``table``; then summed volumes.
+@njit(cache=True, nogil=True)
+def signed_corners(ez, ey, ex, boxes, cell, weight):
+    """What :func:`block_integrals` needs of each box: along each axis four nodes with signed weights.
+
+    cell : (R, 3, 2) int64, weight : (R, 3, 4) float64, written; axes z, y, x. The integral is the sum
+    over the nodes cell, cell + 1 of the upper end less those of the lower end, in all three axes.
+    """
+    for r in range(boxes.shape[0]):
+        for axis in range(3):
+            edges = ez if axis == 0 else (ey if axis == 1 else ex)
+            for end in range(2):
+                c, f = locate(edges, boxes[r, 2 * (2 - axis) + end])
+                sign = 1.0 if end == 1 else -1.0
+                cell[r, axis, end] = c
+                weight[r, axis, 2 * end] = sign * (1.0 - f)
+                weight[r, axis, 2 * end + 1] = sign * f
+
+
+@njit(cache=True, nogil=True)
+def fill_block(e, offsets, starts, weight, first, second, imaginary, row, table):
+    """Summed volumes of the absorbed power of LANES matrix entries, innermost in ``table``.
 
     e : (n, 3, samples z, y, x) complex64, V/m.
     offsets : (S, 3) int64, starts : (4,) int64; component c of a cell has the samples
         offsets[starts[c] : starts[c+1]] relative to the cell's index; their outer products are averaged.
-    weight : (nz, ny, nx) float64, σ/2 times volume; cells of weight 0 are never read.
-    first, second, imaginary : (B,) the entries: Re or Im of conj(E_first) E_second.
-    table : (B, nz+1, ny+1, nx+1) float64, written.
+    weight : (nz, ny, nx) float64, σ/2 times volume.
+    first, second, imaginary : (LANES,) the entries: Re or Im of conj(E_first) E_second.
+    row : (LANES, nx) float64 scratch. table : (nz+1, ny+1, nx+1, LANES) float64, written.
     """
     nz, ny, nx = weight.shape
-    for b in prange(first.size):
-        i1, i2, imag = first[b], second[b], imaginary[b]
-        t = table[b]
-        t[0] = 0.0
-        for k in range(nz):
-            t[k + 1, 0] = 0.0
-            for j in range(ny):
-                t[k + 1, j + 1, 0] = 0.0
+    table[0] = 0.0
+    for k in range(nz):
+        table[k + 1, 0] = 0.0
+        for j in range(ny):
+            row[:] = 0.0
+            for b in range(LANES):
+                for c in range(3):
+                    share = 1.0 / (starts[c + 1] - starts[c])
+                    for s in range(starts[c], starts[c + 1]):
+                        kk, jj, ii = k + offsets[s, 0], j + offsets[s, 1], offsets[s, 2]
+                        p = e[first[b], c, kk, jj, ii : ii + nx]
+                        q = e[second[b], c, kk, jj, ii : ii + nx]
+                        if imaginary[b]:
+                            for i in range(nx):
+                                row[b, i] += share * (
+                                    np.float64(p[i].real) * np.float64(q[i].imag)
+                                    - np.float64(p[i].imag) * np.float64(q[i].real)
+                                )
+                        else:
+                            for i in range(nx):
+                                row[b, i] += share * (
+                                    np.float64(p[i].real) * np.float64(q[i].real)
+                                    + np.float64(p[i].imag) * np.float64(q[i].imag)
+                                )
+            before, below, corner = table[k + 1, j], table[k, j + 1], table[k, j]
+            here = table[k + 1, j + 1]
+            here[0] = 0.0
+            for b in range(LANES):
                 run = 0.0
                 for i in range(nx):
-                    w = weight[k, j, i]
-                    if w > 0.0:
-                        total = 0.0
-                        for c in range(3):
-                            part = 0.0
-                            for s in range(starts[c], starts[c + 1]):
-                                a = e[i1, c, k + offsets[s, 0], j + offsets[s, 1], i + offsets[s, 2]]
-                                d = e[i2, c, k + offsets[s, 0], j + offsets[s, 1], i + offsets[s, 2]]
-                                ar, ai = np.float64(a.real), np.float64(a.imag)
-                                dr, di = np.float64(d.real), np.float64(d.imag)
-                                if imag:
-                                    part += ar * di - ai * dr
-                                else:
-                                    part += ar * dr + ai * di
-                            total += part / (starts[c + 1] - starts[c])
-                        run += w * total
-                    t[k + 1, j + 1, i + 1] = run + t[k + 1, j, i + 1]
-            if k > 0:
-                for j in range(1, ny + 1):
-                    for i in range(1, nx + 1):
-                        t[k + 1, j, i] += t[k, j, i]
+                    run += weight[k, j, i] * row[b, i]
+                    row[b, i] = run
+            for i in range(nx):
+                for b in range(LANES):
+                    here[i + 1, b] = row[b, i] + before[i + 1, b] + (below[i + 1, b] - corner[i + 1, b])
+
+
+@njit(cache=True, nogil=True)
+def block_integrals(table, cell, weight, scale, out, at):
+    """out[r, at : at + LANES] = scale[r] · integrals over box r (:func:`signed_corners`)."""
+    for r in range(cell.shape[0]):
+        a0 = a1 = a2 = a3 = a4 = a5 = a6 = a7 = 0.0
+        for z in range(4):
+            wz = weight[r, 0, z] * scale[r]
+            plane = table[cell[r, 0, z >> 1] + (z & 1)]
+            for y in range(4):
+                wzy = wz * weight[r, 1, y]
+                line = plane[cell[r, 1, y >> 1] + (y & 1)]
+                for x in range(4):
+                    w = wzy * weight[r, 2, x]
+                    node = line[cell[r, 2, x >> 1] + (x & 1)]
+                    a0 += w * node[0]
+                    a1 += w * node[1]
+                    a2 += w * node[2]
+                    a3 += w * node[3]
+                    a4 += w * node[4]
+                    a5 += w * node[5]
+                    a6 += w * node[6]
+                    a7 += w * node[7]
+        o = out[r, at : at + LANES]
+        o[0], o[1], o[2], o[3], o[4], o[5], o[6], o[7] = a0, a1, a2, a3, a4, a5, a6, a7
 
 
 @njit(cache=True, nogil=True, parallel=True)
-def boxes_from_tables(table, ez, ey, ex, boxes, scale, out):
-    """out[r, b] = scale[r] · integral of density b over box r.
+def average_entries(
+    e, offsets, starts, weight, first, second, imaginary, cell, corner_weight, scale, tables, out
+):
+    """Averages of all matrix entries over all boxes of a tile.
 
-    table : (B, nz+1, ny+1, nx+1); boxes : (R, 6); scale : (R,); out : (R, B), written.
+    first, second, imaginary : (B·LANES,), padded with entry 0. tables : (T, nz+1, ny+1, nx+1, LANES)
+    scratch of T workers, whose number changes no bit. out : (R, B·LANES) float64, written.
     """
-    for r in prange(boxes.shape[0]):
-        for b in range(table.shape[0]):
-            out[r, b] = scale[r] * box_integral(table[b], ez, ey, ex, boxes[r])
+    blocks = first.size // LANES
+    workers = tables.shape[0]
+    for t in prange(workers):
+        row = np.empty((LANES, weight.shape[2]))
+        for b in range(t, blocks, workers):
+            part = slice(b * LANES, (b + 1) * LANES)
+            fill_block(e, offsets, starts, weight, first[part], second[part], imaginary[part], row, tables[t])
+            block_integrals(tables[t], cell, corner_weight, scale, out, b * LANES)
+
+
+@njit(cache=True, nogil=True)
+def box_integrals(table, ez, ey, ex, boxes, out):
+    """out[r] = integral of one summed volume over box r; boxes : (R, 6), out : (R,) float64."""
+    for r in range(boxes.shape[0]):
+        out[r] = box_integral(table, ez, ey, ex, boxes[r])
