@@ -141,6 +141,11 @@ def search(targets, extra, columns, columns_t, probes, probe_values, scale, conv
     for r in range(n_targets):
         terms = 0
         target_entries = largest_entry(targets[r])
+        if not target_entries < np.inf:
+            # NaN or infinity: stays open, and no bound says anything about it.
+            bound[r] = np.nan
+            starts[r + 1] = starts[r]
+            continue
         for p in range(width):
             target[p] = np.float64(targets[r, p]) - extra[p]
 

@@ -16,8 +16,9 @@ class Unproved:
     """A matrix (first statement) or VOP (second) whose inequality was not proved.
 
     index : row of the model, or of the set.
-    shortfall : −(upper bound of λmin that any weights reach), fraction of the worst case; positive
-        means that no weights exist, as ``covariance`` shows; NaN where nothing was searched.
+    shortfall : −(upper bound of λmin that any weights reach), fraction of the worst case, within a few
+        percent; positive means that no weights exist, as ``covariance`` shows; NaN where nothing was
+        searched.
     covariance : (n, n) complex128 X ⪰ 0 of unit trace along which the inequality fails, or None.
     excitation : (n,) complex128 of unit length along which it fails already, or None: a failure that
         needs a covariance (the average of several excitations) may have none.
