@@ -51,35 +51,32 @@ def find_side(table, kind, k, j, i, ez, ey, ex, wanted, guess, longest, box):
     low, f_low = 0.0, -wanted
     high = min(guess, longest)
     f_high = _mass(table, kind, high, k, j, i, ez, ey, ex, box) - wanted
-    while f_high < 0.0:
-        if f_high >= -_MASS_ERROR * wanted:
-            break
+    while f_high < -_MASS_ERROR * wanted:
         if high >= longest:
             return -1.0
         low, f_low = high, f_high
-        high = min(1.3 * high, longest)
+        high = min(1.2 * high, longest)
         f_high = _mass(table, kind, high, k, j, i, ez, ey, ex, box) - wanted
-    side = 0
+    last = 0
     for _ in range(200):
         if abs(f_high) <= _MASS_ERROR * wanted or high - low <= 1e-15 * high:
             break
-        x = (low * f_high - high * f_low) / (f_high - f_low)
+        # The mass is nearly proportional to the volume: interpolate there.
+        c_low, c_high = low * low * low, high * high * high
+        x = ((c_low * f_high - c_high * f_low) / (f_high - f_low)) ** (1.0 / 3.0)
         if not (x > low and x < high):
             x = 0.5 * (low + high)
         f = _mass(table, kind, x, k, j, i, ez, ey, ex, box) - wanted
-        if f < 0.0:
-            if f >= -_MASS_ERROR * wanted:
-                high, f_high = x, f
-                break
+        if f < -_MASS_ERROR * wanted:
             low, f_low = x, f
-            if side == -1:
+            if last == -1:
                 f_high *= 0.5
-            side = -1
+            last = -1
         else:
             high, f_high = x, f
-            if side == 1:
+            if last == 1:
                 f_low *= 0.5
-            side = 1
+            last = 1
     enough = wanted * (1.0 - _MASS_ERROR)
     nearby = high * (1.0 - 1e-6)
     if nearby > low and _mass(table, kind, nearby, k, j, i, ez, ey, ex, box) >= enough:
@@ -148,7 +145,7 @@ def centred_cubes(mass, tissue, body, rho, ez, ey, ex, voxels, wanted, longest, 
     for v in prange(voxels.shape[0]):
         k, j, i = voxels[v]
         box = boxes[v]
-        guess = (wanted / rho[k, j, i]) ** (1.0 / 3.0) * 1.02
+        guess = (wanted / rho[k, j, i]) ** (1.0 / 3.0)
         side = find_side(mass, 1, k, j, i, ez, ey, ex, wanted, guess, longest, box)
         if side < 0.0:
             state[v] = 4
