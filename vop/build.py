@@ -11,9 +11,10 @@ import numpy as np
 from numba import get_num_threads
 
 from vop.averaging.geometry import STANDARD, find_cubes
+from vop.averaging.samples import COMBINATIONS, read_samples
 from vop.cubes import CubeGeometry
 from vop.errors import InputError
-from vop.fields import SAMPLES, FieldSource
+from vop.fields import FieldSource
 from vop.grid import Box, RectilinearGrid
 from vop.hermitian import packed_entries, round_outward, unpack
 from vop.kernels.averaging import LANES, average_entries, signed_corners
@@ -22,7 +23,6 @@ from vop.progress import Progress, silent
 from vop.sarmodel import SarModel, create_rows, write_model
 from vop.storage import create_hdf5, refuse_existing
 
-COMBINATIONS = ("outer", "field")
 #: Memory for the fields of a tile, for its tables and for its results, each; sets the size of tiles.
 _BYTES = 400 << 20
 _LARGEST_TILE, _SMALLEST_TILE = 96, 8
@@ -175,12 +175,7 @@ def _surrounding(grid: RectilinearGrid, core: Box, boxes: np.ndarray) -> Box:
 def _tile_matrices(source: FieldSource, tile: _Tile, cubes: CubeGeometry, combine: str) -> np.ndarray:
     """Averaged matrices of a tile's cubes, and the absorbed power of its core as a last row: float64."""
     around = tile.around
-    e = _read(source, around)
-    samples = SAMPLES[source.centring]
-    if combine == "field" and source.centring != "cell":
-        e, samples = _mean_samples(e, samples), SAMPLES["cell"]
-    offsets = np.array([o for component in samples for o in component], dtype=np.int64)
-    starts = np.cumsum([0, *(len(component) for component in samples)])
+    e, offsets, starts = read_samples(source, around, combine)
     weight = 0.5 * source.tissue.conductivity_s_m[around].astype(np.float64) * source.grid.volumes_m3(around)
     ez, ey, ex = (a[s.start : s.stop + 1] for a, s in zip(source.grid.edges_m, around, strict=True))
     z, y, x = (a[[s.start, s.stop]] for a, s in zip(source.grid.edges_m, tile.core, strict=True))
@@ -199,42 +194,6 @@ def _tile_matrices(source: FieldSource, tile: _Tile, cubes: CubeGeometry, combin
         e, offsets, starts, weight, first, second, imaginary, cell, corner_weight, scale, tables, out
     )
     return out[:, : len(entries[0])]
-
-
-def _read(source: FieldSource, around: Box) -> np.ndarray:
-    body = source.tissue.body[around]
-    touched = body
-    if source.centring != "cell":
-        # A sample matters if any cell that uses it is tissue.
-        padded = np.pad(body, ((0, 1),) * 3)
-        touched = np.zeros_like(padded)
-        for k in (0, 1):
-            for j in (0, 1):
-                for i in (0, 1):
-                    touched |= np.roll(padded, (k, j, i), (0, 1, 2))
-    out = []
-    for channel in range(source.n_channels):
-        e = source.electric(channel, around)
-        bad = ~np.isfinite(e).all(axis=0) & touched
-        if bad.any():
-            at = [int(v) + s.start for v, s in zip(np.argwhere(bad)[0], around, strict=True)]
-            raise InputError(
-                f"field of channel {source.channel_names[channel]} is NaN or infinite at {int(bad.sum())} "
-                f"samples in tissue, the first at [z, y, x] = {at}; repair the export, or crop it away"
-            )
-        e[:, ~touched] = 0
-        out.append(e)
-    return np.array(out)
-
-
-def _mean_samples(e: np.ndarray, samples: tuple[tuple[tuple[int, int, int], ...], ...]) -> np.ndarray:
-    nz, ny, nx = (s - 1 for s in e.shape[2:])
-    out = np.zeros((e.shape[0], 3, nz, ny, nx), np.complex128)
-    for component, offsets in enumerate(samples):
-        for k, j, i in offsets:
-            out[:, component] += e[:, component, k : k + nz, j : j + ny, i : i + nx]
-        out[:, component] /= len(offsets)
-    return out.astype(np.complex64)
 
 
 def _metadata(source: FieldSource, cubes: CubeGeometry, combine: str) -> Metadata:
