@@ -128,8 +128,9 @@ class _Attack:
             factors = draw(batch, min(_BATCH, total - first))
             ratio, use = self.evaluate.single(functionals_of(factors))
             order = np.argsort(ratio, kind="stable")
-            suspect = np.flatnonzero((ratio < 1 + SINGLE) | (use > 1 - SINGLE))
-            chosen = np.unique([*order[:_CLOSEST], order[-1], int(use.argmax()), *suspect])
+            most_used = np.argsort(-use, kind="stable")[:_CLOSEST]
+            suspect = np.flatnonzero(ratio < 1 + SINGLE)
+            chosen = np.unique(np.concatenate([order[:_CLOSEST], order[-1:], most_used, suspect]))
             self._confirm(factors[chosen], calls)
             self.progress(label, first + len(factors), total)
 

@@ -59,9 +59,10 @@ class Evaluator:
             still = best[alive] <= bound * (1 + SINGLE)
             if np.count_nonzero(still) < 0.8 * len(alive):
                 alive = alive[still]
+                f = f[still]
             if not len(alive):
                 break
-            values = (f[alive] @ self._model[first:last].T).max(axis=1)
+            values = (f @ self._model[first:last].T).max(axis=1)
             best[alive] = np.maximum(best[alive], values)
         return best
 

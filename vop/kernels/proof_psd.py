@@ -70,6 +70,12 @@ def shift_bound(trace, entries, n, terms):
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
+def expand(row, n, out):
+    """``unpack_row`` as a call: inlined at each of its many places here it would compile for a minute."""
+    unpack_row(row, n, out)
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
 def cholesky(h, n, shift, factor):
     """Factorise H − shift·1 into the lower triangle of ``factor``.
 
@@ -157,7 +163,7 @@ def certify(targets, extra, columns, starts, index, weight, n, proved):
             proved[r] = False
             continue
         entries = combine(targets[r], extra, columns, index[first:last], weight[first:last], n, packed)
-        unpack_row(packed, n, h)
+        expand(packed, n, h)
         trace = positive_trace(h, n)
         base = shift_bound(trace, entries, n, float(last - first + 1))
         if margin < np.inf and cholesky(h, n, (base + margin) * _SLACK, factor) == n:

@@ -11,9 +11,9 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from vop.hermitian import pack_row, unpack_row
+from vop.hermitian import pack_row
 from vop.kernels.proof_convex import FOUND, convex_weights
-from vop.kernels.proof_psd import cholesky, combine, largest_entry, positive_trace, shift_bound
+from vop.kernels.proof_psd import cholesky, combine, expand, largest_entry, positive_trace, shift_bound
 
 #: How a target was covered.
 OPEN, POOLED, SINGLE, COMBINED = 0, 1, 2, 3
@@ -31,18 +31,6 @@ def functional(x, n, gain, square, out):
     pack_row(square, n, out)
     for p in range(n * n):
         out[p] *= gain[p]
-
-
-@njit(cache=True, nogil=True, error_model="numpy")
-def values_of(columns_t, f, out):
-    """out[k] = Σ_p columns_t[p, k] f[p], summed in fixed order."""
-    for k in range(out.shape[0]):
-        out[k] = 0.0
-    for p in range(f.shape[0]):
-        row = columns_t[p]
-        c = f[p]
-        for k in range(out.shape[0]):
-            out[k] += c * row[k]
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -74,7 +62,7 @@ def failing_direction(factor, n, at, x):
 @njit(cache=True, nogil=True, error_model="numpy")
 def _covers(packed, entries, n, terms, h, factor):
     """n where the combination is proved, else the failing column."""
-    unpack_row(packed, n, h)
+    expand(packed, n, h)
     # Twice the bound: the sums here are not in the order of the proof, whose shift must pass too.
     return cholesky(h, n, 2.0 * shift_bound(positive_trace(h, n), entries, n, terms), factor)
 
@@ -118,15 +106,11 @@ def search(targets, extra, columns, columns_t, probes, probe_values, scale, conv
     witness = np.zeros((n_targets, width))
 
     h = np.empty((n, n), dtype=np.complex128)
-    square = np.empty((n, n), dtype=np.complex128)
     factor = np.zeros((n, n), dtype=np.complex128)
-    x = np.empty(n, dtype=np.complex128)
     packed = np.empty(width)
     f = np.empty(width)
     target = np.empty(width)
     margins = np.empty(n_columns)
-    one = np.ones(1)
-    pick = np.empty(1, dtype=np.int64)
 
     limit = min(n_columns, max(48, 8 * n))
     pool_sum = np.zeros((_POOL, width))
@@ -135,16 +119,17 @@ def search(targets, extra, columns, columns_t, probes, probe_values, scale, conv
     pool_weight = np.zeros((_POOL, limit))
     pool_entries = np.zeros(_POOL)
     order = np.arange(_POOL)
+    chosen, c, m = np.zeros(limit, dtype=np.int64), np.zeros(limit), 0
     filled = 0
     extra_entries = largest_entry(extra)
 
     for r in range(n_targets):
-        terms = 0
+        first = starts[r]
+        starts[r + 1] = first
         target_entries = largest_entry(targets[r])
         if not target_entries < np.inf:
             # NaN or infinity: stays open, and no bound says anything about it.
             bound[r] = np.nan
-            starts[r + 1] = starts[r]
             continue
         for p in range(width):
             target[p] = np.float64(targets[r, p]) - extra[p]
@@ -156,114 +141,113 @@ def search(targets, extra, columns, columns_t, probes, probe_values, scale, conv
             entries = pool_entries[s] + target_entries + extra_entries
             if _covers(packed, entries, n, pool_terms[s] + 1.0, h, factor) == n:
                 how[r] = POOLED
-                terms = pool_terms[s]
                 _to_front(order, slot)
                 break
 
         if how[r] == OPEN:
-            for k in range(n_columns):
-                margins[k] = np.inf
-            for q in range(probes.shape[0]):
-                wanted = _dot(target, probes[q])
-                row = probe_values[q]
-                for k in range(n_columns):
-                    margins[k] = min(margins[k], row[k] - wanted)
-            while True:
-                best = np.argmax(margins)
-                if not margins[best] >= 0.0:
-                    break
-                pick[0] = best
-                entries = combine(targets[r], extra, columns, pick, one, n, packed)
-                at = _covers(packed, entries, n, 2.0, h, factor)
-                if at < n and extra_entries == 0.0 and largest_entry(packed) == 0.0:
-                    at = n  # the very same matrix
-                if at == n:
-                    how[r] = SINGLE
-                    terms = 1
-                    _remember(
-                        pool_sum, pool_terms, pool_index, pool_weight, pool_entries, order, pick, one, columns
-                    )
-                    filled = min(filled + 1, _POOL)
-                    break
-                failing_direction(factor, n, at, x)
-                functional(x, n, gain, square, f)
-                wanted = _dot(target, f)
-                for k in range(n_columns):
-                    if margins[k] >= 0.0:
-                        margins[k] = min(margins[k], _dot(columns[k], f) - wanted)
-                margins[best] = -np.inf
+            _probe(target, probes, probe_values, margins)
+            best = _single(targets[r], target, extra, columns, margins, n, gain, packed, f, h, factor)
+            if best >= 0:
+                how[r] = SINGLE
+                chosen[0], c[0], m = best, 1.0, 1
+            elif convex:
+                _probe(target, probes, probe_values, margins)
+                status, m, chosen, c, bound[r] = convex_weights(
+                    columns, columns_t, target, margins, scale, n, gain, limit, witness[r]
+                )
+                if status == FOUND:
+                    entries = combine(targets[r], extra, columns, chosen[:m], c[:m], n, packed)
+                    if _covers(packed, entries, n, m + 1.0, h, factor) == n:
+                        how[r] = COMBINED
+            if how[r] != OPEN:
+                _to_front(order, _POOL - 1)
+                s = order[0]
+                pool_terms[s] = m
+                pool_entries[s] = _remember(columns, chosen, c, m, pool_index[s], pool_weight[s], pool_sum[s])
+                filled = min(filled + 1, _POOL)
 
-        if how[r] == OPEN and convex:
-            for k in range(n_columns):
-                margins[k] = np.inf
-            for q in range(probes.shape[0]):
-                wanted = _dot(target, probes[q])
-                row = probe_values[q]
-                for k in range(n_columns):
-                    margins[k] = min(margins[k], row[k] - wanted)
-            status, m, chosen, c, upper = convex_weights(
-                columns, columns_t, target, margins, scale, n, gain, limit, witness[r]
-            )
-            bound[r] = upper
-            if status == FOUND:
-                entries = combine(targets[r], extra, columns, chosen[:m], c[:m], n, packed)
-                if _covers(packed, entries, n, m + 1.0, h, factor) == n:
-                    how[r] = COMBINED
-                    terms = m
-                    _remember(
-                        pool_sum,
-                        pool_terms,
-                        pool_index,
-                        pool_weight,
-                        pool_entries,
-                        order,
-                        chosen[:m],
-                        c[:m],
-                        columns,
-                    )
-                    filled = min(filled + 1, _POOL)
         if how[r] != OPEN:
             bound[r] = np.inf
             for p in range(width):
                 witness[r, p] = 0.0
-
-        first = starts[r]
-        starts[r + 1] = first + terms
-        if first + terms > index.shape[0]:
-            index = _grown(index, first + terms)
-            weight = _grown(weight, first + terms)
-        s = order[0]
-        for t in range(terms):
-            index[first + t] = pool_index[s, t]
-            weight[first + t] = pool_weight[s, t]
+            s = order[0]
+            starts[r + 1] = first + pool_terms[s]
+            if starts[r + 1] > index.shape[0]:
+                index = _grown(index, first, 2 * starts[r + 1])
+                weight = _grown(weight, first, 2 * starts[r + 1])
+            for t in range(pool_terms[s]):
+                index[first + t] = pool_index[s, t]
+                weight[first + t] = pool_weight[s, t]
     total = starts[n_targets]
-    return how, starts, index[:total].copy(), weight[:total].copy(), bound, witness
+    return how, starts, index[:total], weight[:total], bound, witness
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def _grown(values, needed):
-    out = np.empty(2 * needed, dtype=values.dtype)
-    out[: values.shape[0]] = values
+def _probe(target, probes, probe_values, margins):
+    """margins[k] = the least of tr(C_k X) − tr(T X) over the probes X."""
+    for k in range(margins.shape[0]):
+        margins[k] = np.inf
+    for q in range(probes.shape[0]):
+        wanted = _dot(target, probes[q])
+        row = probe_values[q]
+        for k in range(margins.shape[0]):
+            margins[k] = min(margins[k], row[k] - wanted)
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _single(row, target, extra, columns, margins, n, gain, packed, f, h, factor):
+    """A column that covers the target by itself, or −1.
+
+    Columns are tried in descending order of their margins; what stops the factorisation of one is a
+    witness that excludes others.
+    """
+    x = np.empty(n, dtype=np.complex128)
+    square = np.empty((n, n), dtype=np.complex128)
+    pick, one = np.zeros(1, dtype=np.int64), np.ones(1)
+    extra_is_zero = largest_entry(extra) == 0.0
+    while True:
+        best = 0
+        for k in range(margins.shape[0]):
+            if margins[k] > margins[best]:
+                best = k
+        if not margins[best] >= 0.0:
+            return -1
+        pick[0] = best
+        entries = combine(row, extra, columns, pick, one, n, packed)
+        at = _covers(packed, entries, n, 2.0, h, factor)
+        if at == n or (extra_is_zero and largest_entry(packed) == 0.0):
+            return best
+        failing_direction(factor, n, at, x)
+        functional(x, n, gain, square, f)
+        wanted = _dot(target, f)
+        for k in range(margins.shape[0]):
+            if margins[k] >= 0.0:
+                margins[k] = min(margins[k], _dot(columns[k], f) - wanted)
+        margins[best] = -np.inf
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _grown(values, used, size):
+    out = np.empty(size, dtype=values.dtype)
+    for i in range(used):
+        out[i] = values[i]
     return out
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def _remember(sums, terms, index, weight, entries, order, chosen, c, columns):
-    """Put a combination into the least recently used slot, and that slot to the front."""
-    _to_front(order, order.shape[0] - 1)
-    s = order[0]
-    m = chosen.shape[0]
-    terms[s] = m
-    entries[s] = 0.0
-    for p in range(sums.shape[1]):
-        sums[s, p] = 0.0
+def _remember(columns, chosen, c, m, index, weight, mixture):
+    """Write a combination into a slot of the pool; returns its ``entries``."""
+    entries = 0.0
+    for p in range(mixture.shape[0]):
+        mixture[p] = 0.0
     for t in range(m):
-        index[s, t] = chosen[t]
-        weight[s, t] = c[t]
+        index[t] = chosen[t]
+        weight[t] = c[t]
         column = columns[chosen[t]]
-        entries[s] += c[t] * largest_entry(column)
-        for p in range(sums.shape[1]):
-            sums[s, p] += c[t] * np.float64(column[p])
+        entries += c[t] * largest_entry(column)
+        for p in range(mixture.shape[0]):
+            mixture[p] += c[t] * np.float64(column[p])
+    return entries
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -272,7 +256,7 @@ def leading_excitations(rows, n, steps, out):
     h = np.empty((n, n), dtype=np.complex128)
     y = np.empty(n, dtype=np.complex128)
     for r in range(rows.shape[0]):
-        unpack_row(rows[r], n, h)
+        expand(rows[r], n, h)
         largest = 0
         for i in range(n):
             if h[i, i].real > h[largest, largest].real:

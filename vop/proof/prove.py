@@ -108,6 +108,11 @@ def _require_same_excitations(vop_set: VopSet, model: SarModel) -> None:
             f"the set has channels {', '.join(vop_set.metadata.channel_names)}, "
             f"the model {', '.join(model.metadata.channel_names)}; they do not belong together"
         )
+    if vop_set.metadata.measure != model.metadata.measure:
+        raise InputError(
+            f"the set holds {vop_set.metadata.measure}, the model {model.metadata.measure}; prove a set "
+            "against the model it was made from"
+        )
     if vop_set.metadata.reference != model.metadata.reference:
         raise InputError(
             f"the set refers to {vop_set.metadata.reference}, the model to {model.metadata.reference}; "
@@ -214,7 +219,7 @@ def _unproved(
 
 
 def _bound_text(vop_set: VopSet) -> str:
-    unit = vop_set.metadata.reference.sar_unit
+    unit = vop_set.metadata.matrix_unit
     eps, worst = vop_set.overestimation, vop_set.worst_case
     if np.array_equal(pack(vop_set.overestimation_matrix), worst * identity(vop_set.n_channels)):
         return f"at most {eps:g} × worst case × ‖w‖² above the model's maximum, {eps * worst:.6g} {unit}"
