@@ -10,6 +10,7 @@ from vop.cubes import CubeKind, VoxelStatus
 from vop.errors import InputError
 from vop.hermitian import pack_excitations
 from vop.kernels.sar_map import spread_over_used
+from vop.metadata import LOCAL_SAR
 from vop.sarmodel import SarModel
 
 
@@ -99,6 +100,10 @@ def sar_map(model: SarModel, w: np.ndarray) -> np.ndarray:
 
 
 def _checked(model: SarModel, w: np.ndarray) -> np.ndarray:
+    if model.metadata.measure != LOCAL_SAR:
+        raise InputError(
+            f"the model holds {model.metadata.measure}, not W/kg; take the model that was divided by limits"
+        )
     w = np.atleast_2d(np.asarray(w, dtype=np.complex128))
     if w.ndim != 2 or w.shape[1] != model.n_channels:
         raise InputError(f"excitation of shape {w.shape} for a model of {model.n_channels} channels")

@@ -21,6 +21,9 @@ REFERENCES = {
     "port current": "A",
 }
 PHASORS = ("peak", "rms")
+#: What wᴴQw is: W/kg, or a fraction of the limit that applies (1 is the limit).
+LOCAL_SAR, FRACTION_OF_LIMIT = "local SAR", "fraction of limit"
+MEASURES = (LOCAL_SAR, FRACTION_OF_LIMIT)
 TIME_SIGNS = ("+", "-")
 
 #: The convention of everything after reading; written into every file.
@@ -151,7 +154,8 @@ class Metadata:
     """Everything beside the numbers of a model or a set.
 
     ``details`` holds what the step that made the file wants to record (averaging rule, counts,
-    compression settings, digests of inputs); plain JSON values only.
+    compression settings, digests of inputs); plain JSON values only. ``measure`` is one of
+    :data:`MEASURES`.
     """
 
     reference: Reference
@@ -159,6 +163,17 @@ class Metadata:
     domain: Domain = field(default_factory=Domain)
     warnings: tuple[str, ...] = ()
     details: Mapping[str, Any] = field(default_factory=dict)
+    measure: str = LOCAL_SAR
+
+    def __post_init__(self) -> None:
+        if self.measure not in MEASURES:
+            raise InputError(f"measure {self.measure!r} is not known; known: {', '.join(MEASURES)}")
+
+    @property
+    def matrix_unit(self) -> str:
+        """Unit of the matrices, per unit of |w|²."""
+        unit = self.reference.sar_unit
+        return unit if self.measure == LOCAL_SAR else unit.replace("W/kg", self.measure)
 
     def with_details(self, **more: Any) -> Metadata:
         """A copy whose ``details`` gained ``more``."""
@@ -192,6 +207,7 @@ class Metadata:
                 domain=Domain(**domain),
                 warnings=tuple(str(w) for w in raw["warnings"]),
                 details=dict(raw["details"]),
+                measure=raw.get("measure", LOCAL_SAR),
             )
         except (ValueError, KeyError, TypeError, AttributeError) as error:
             raise InputError(f"metadata are not what this version writes: {error}") from error

@@ -83,7 +83,7 @@ def model_lines(model: SarModel) -> list[str]:
     meta = model.metadata
     lines = [
         f"model       {len(model)} local matrices, {model.n_channels} channels, "
-        f"{meta.reference.sar_unit}, w in {meta.reference.unit} ({meta.reference.quantity})"
+        f"{meta.matrix_unit}, w in {meta.reference.unit} ({meta.reference.quantity})"
     ]
     if model.cubes is not None:
         mass = model.cubes.average_mass_kg
@@ -102,12 +102,12 @@ def model_lines(model: SarModel) -> list[str]:
 
 def set_lines(vop_set: VopSet) -> list[str]:
     """What a set holds."""
-    reference = vop_set.metadata.reference
+    unit = vop_set.metadata.matrix_unit
     return [
         f"set         {len(vop_set)} VOPs, {vop_set.n_channels} channels, method {vop_set.method}",
         f"bound       ε = {vop_set.overestimation:g}: overestimation at most "
-        f"{vop_set.overestimation * vop_set.worst_case:.6g} {reference.sar_unit} along S",
-        f"worst case  {vop_set.worst_case:.8g} {reference.sar_unit}",
+        f"{vop_set.overestimation * vop_set.worst_case:.6g} {unit} along S",
+        f"worst case  {vop_set.worst_case:.8g} {unit}",
         f"digest      {vop_set.digest()}",
         *_warnings(vop_set.metadata.warnings),
     ]

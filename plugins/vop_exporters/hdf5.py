@@ -11,7 +11,8 @@ from vop.storage import open_hdf5, seal
 from vop.vopset import VopSet, read_set, write_set
 
 SCHEMA = """\
-vops/packed (K, n*n) float32: delivered VOPs A_k, W/kg per |w|^2, Hermitian, packed as: n diagonal
+vops/packed (K, n*n) float32: delivered VOPs A_k, W/kg per |w|^2, or fractions of limits
+(1 is the limit) where metadata.measure says so, Hermitian, packed as: n diagonal
 entries; real parts of the strict upper triangle, row by row; imaginary parts, same order.
 SAR(w) = w^H Q w <= max_k w^H A_k w, w complex, peak phasors, exp(+j omega t), unit in metadata.
 A_k <= conv(Q) + overestimation * S in the semidefinite order; S = overestimation_matrix, packed.

@@ -2,9 +2,10 @@
 
 Variables (all double unless said):
 
-* ``vop`` (n, n, K) complex: delivered VOPs A_k, W/kg per |w|²; ``vop(:,:,k)`` is one Hermitian matrix;
-* ``overestimation`` (ε), ``worst_case`` (W/kg per |w|²), ``overestimation_matrix`` (n, n) complex, S;
-* ``global_NAME`` (n, n) complex: whole-volume matrices, blanks in their names as ``_``;
+* ``vop`` (n, n, K) complex: delivered VOPs A_k, in ``unit``; ``vop(:,:,k)`` is one Hermitian matrix;
+* ``overestimation`` (ε), ``worst_case`` (same unit), ``overestimation_matrix`` (n, n) complex, S;
+* ``global_NAME`` (n, n) complex: whole-volume matrices, blanks in their names as ``_``; ``global_units``
+  lists name and unit of each;
 * ``selftest_w`` (n, m) complex and ``selftest_sar`` (m, 1): excitations and the max_k real(w'·A_k·w)
   that a right consumer gets; a lost conjugate, a transposed order or √2 shows at once;
 * texts ``holds``, ``unit``, ``reference``, ``channel_names``, ``domain``, ``warnings``, ``caution``,
@@ -14,6 +15,7 @@ Variables (all double unless said):
 from __future__ import annotations
 
 import json
+import re
 from dataclasses import asdict
 from pathlib import Path
 
@@ -22,7 +24,7 @@ import scipy.io
 
 from vop import __version__
 from vop.errors import InputError
-from vop.metadata import PHASE_CONVENTION
+from vop.metadata import PHASE_CONVENTION, Reference
 from vop.selftest import self_test_vectors
 from vop.vopset import VopSet
 
@@ -30,6 +32,8 @@ _CAUTION = "Results need review by qualified people; local rules and licensed pr
 #: Bytes of free text at the start of the file; the writing library puts the time of day there,
 #: which would make equal sets differ.
 _HEADER_TEXT = 116
+#: Longest name of a variable in this format.
+_NAME_LENGTH = 31
 
 
 class Mat5Exporter:
@@ -50,7 +54,7 @@ class Mat5Exporter:
             "selftest_w": w.T,
             "selftest_sar": sar[:, None],
             "holds": f"Q, not its conjugate: {PHASE_CONVENTION}",
-            "unit": f"{meta.reference.sar_unit}; w in {meta.reference.unit}, peak phasors",
+            "unit": f"{meta.matrix_unit}; w in {meta.reference.unit}{_phasor(meta.reference)}",
             "reference": meta.reference.quantity,
             "channel_names": np.array(meta.channel_names, dtype=object),
             "domain": json.dumps(asdict(meta.domain), sort_keys=True),
@@ -59,8 +63,14 @@ class Mat5Exporter:
             "digest": vop_set.digest(),
             "schema": __doc__,
         }
-        for name, matrix in vop_set.global_matrices.items():
-            variables[f"global_{name.replace(' ', '_')}"[:31]] = matrix
+        units = []
+        for number, (name, matrix) in enumerate(sorted(vop_set.global_matrices.items())):
+            variable = re.sub(r"\W", "_", f"global_{name}", flags=re.ASCII)[:_NAME_LENGTH]
+            if variable in variables:
+                variable = f"global_{number}"
+            variables[variable] = matrix
+            units.append(f"{variable}: {name}, {vop_set.global_units.get(name, 'unit not stated')}")
+        variables["global_units"] = "\n".join(units) or "none"
         scipy.io.savemat(path, variables, do_compression=True, oned_as="column")
         text = f"MATLAB 5.0 MAT-file, written by vop {__version__}".ljust(_HEADER_TEXT)
         with open(path, "r+b") as handle:
@@ -75,6 +85,12 @@ class Mat5Exporter:
         # One VOP: the format drops a trailing dimension of one.
         stack = stack.reshape(*stack.shape[:2], -1)
         return np.ascontiguousarray(np.moveaxis(stack, -1, 0)).astype(np.complex128)
+
+
+def _phasor(reference: Reference) -> str:
+    if reference.unit == "sqrt(W)":
+        return ""
+    return ", peak or rms not stated" if reference.phasor == "not stated" else f" {reference.phasor}"
 
 
 EXPORTER = Mat5Exporter()

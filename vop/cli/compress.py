@@ -34,5 +34,5 @@ def command(model: Path, output: Path, overestimation: float, method: str, force
     click.echo(
         f"{output}: {len(vop_set)} VOPs from {len(loaded)} matrices, {vop_set.n_channels} channels; "
         f"overestimation at most {100 * vop_set.overestimation:g} % of worst-case local SAR "
-        f"{vop_set.worst_case:.6g} {vop_set.metadata.reference.sar_unit}; not proved yet: vop prove"
+        f"{vop_set.worst_case:.6g} {vop_set.metadata.matrix_unit}; not proved yet: vop prove"
     )

@@ -90,7 +90,7 @@ def compress(
     worst, worst_row = worst_case(model.packed, norms)
     if not LEAST_WORST_CASE < worst < float(np.finfo(np.float32).max) / (8 * n):
         raise InputError(
-            f"the worst case is {worst:.3g} {model.metadata.reference.sar_unit} (matrix {worst_row}), "
+            f"the worst case is {worst:.3g} {model.metadata.matrix_unit} (matrix {worst_row}), "
             "outside what float32 files hold with full precision; check the units"
         )
     epsilon = _epsilon(overestimation, bound_w_kg, overestimation_matrix, worst)
