@@ -2,19 +2,23 @@
 
 from __future__ import annotations
 
+import re
 from pathlib import Path
 
 import numpy as np
 import pytest
+import scipy.io
 from conftest import write_channel_hdf5
 
-from vop.build import absorbed_power
+from vop.build import absorbed_power, build_sar_model
 from vop.errors import InputError
 from vop.fields import FieldSource, Tissue
 from vop.grid import RectilinearGrid
-from vop.metadata import Conventions
+from vop.handoff import export
+from vop.metadata import Conventions, Metadata, Reference
 from vop.plugins import open_fields
 from vop.regions import Region, Regions, global_matrices_by_region, load_regions
+from vop.vopset import VopSet
 
 SHAPE = (6, 5, 4)
 
@@ -183,6 +187,68 @@ def test_power_of_each_channel_is_a_matrix_with_a_unit() -> None:
     for name, watts in (("forward power a_b", 4.0), ("forward power c", 9.0)):
         assert np.vdot(w, found.matrices[name] @ w).real == pytest.approx(watts)
         assert found.units[name] == "W per |w|^2"
+
+
+def test_a_model_carries_the_matrices_of_its_regions(tmp_path: Path) -> None:
+    write_channel_hdf5(tmp_path / "export")
+    source = open_fields(tmp_path / "export")
+    body = source.tissue.body
+    regions = Regions.everywhere(source.tissue, Region.HEAD)
+    exposed = body & (np.arange(body.shape[0]) < 5)[:, None, None]
+    model = build_sar_model(
+        source, None, regions=regions, exposed=exposed, patient_mass_kg=60.0, path=tmp_path / "model.h5"
+    )
+    wanted = global_matrices_by_region(source, regions, exposed=exposed, patient_mass_kg=60.0)
+    assert set(model.global_matrices) == set(wanted.matrices)
+    for name, matrix in wanted.matrices.items():
+        atol = 1e-9 * np.abs(matrix).max()
+        np.testing.assert_allclose(model.global_matrices[name], matrix, atol=atol)
+        assert model.global_units[name] == wanted.units[name]
+    assert model.metadata.details["global_matrices"]["patient_mass_kg"] == 60.0
+    # Without regions the whole body still comes, from what was summed anyway.
+    plain = build_sar_model(source, None).global_matrices
+    model_mass = wanted.record["model_mass_kg"]
+    np.testing.assert_allclose(plain["whole body"] * model_mass, plain["absorbed power"], rtol=1e-12)
+
+
+@pytest.mark.parametrize(("phasor", "gain"), [("peak", 1.0), ("rms", 2.0)])
+def test_voltages_stay_peak_or_rms_as_the_export_has_them(phasor: str, gain: float) -> None:
+    # E per rms volt, both rms, is √2 E per rms volt as peak field: SAR per rms volt squared doubles.
+    source = _Uniform()
+    source.conventions = Conventions(phasor, "+", "port voltage")
+    model = build_sar_model(source, None)
+    assert model.metadata.reference.phasor == phasor
+    gram = source.vectors.conj() @ source.vectors.T
+    at = int(np.argmax(source.tissue.label.ravel()[model.cubes.voxel] == 2))  # type: ignore[union-attr]
+    np.testing.assert_allclose(model.matrices(at), gain * 0.5 * 0.8 / 1100 * gram, rtol=1e-5)
+
+
+def test_global_matrices_travel_into_a_mat_file_with_name_and_unit(tmp_path: Path) -> None:
+    # Names of variables end after 31 characters: two that agree so far must not become one.
+    long = "forward power of a channel with a long name, number"
+    matrices = {f"{long} {c}": (c + 1) * np.eye(2) + 0j for c in range(2)} | {
+        "whole body": 9 * np.eye(2) + 0j
+    }
+    vop_set = VopSet(
+        packed=np.array([[1, 1, 0, 0]], np.float32),
+        overestimation=0.1,
+        worst_case=0.5,
+        overestimation_matrix=0.5 * np.eye(2),
+        core_index=np.zeros(1, np.int64),
+        method="by hand",
+        metadata=Metadata(Reference("port voltage", phasor="rms"), ("1", "2")),
+        global_matrices=matrices,
+        global_units=dict.fromkeys(matrices, "W/kg per |w|^2"),
+    )
+    export(vop_set, tmp_path / "set.mat", "mat5")
+    found = scipy.io.loadmat(tmp_path / "set.mat")
+    lines = str(found["global_units"][0]).split("\n")
+    assert len(lines) == 3
+    for line in lines:
+        variable, name, unit = re.fullmatch(r"(\w+): (.*), (W/kg.*)", line).groups()  # type: ignore[union-attr]
+        np.testing.assert_array_equal(found[variable], matrices[name])
+        assert unit == "W/kg per |w|^2"
+    assert str(found["unit"][0]) == "W/kg per V^2; w in V rms"
 
 
 def test_a_patient_lighter_than_the_model_and_a_foreign_exposed_part_are_refused() -> None:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import itertools
 import os
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numba import get_num_threads
@@ -20,6 +20,7 @@ from vop.hermitian import packed_entries, round_outward, unpack
 from vop.kernels.averaging import LANES, average_entries, signed_corners
 from vop.metadata import Domain, Metadata, Reference
 from vop.progress import Progress, silent
+from vop.regions import Regions, global_matrices_by_region
 from vop.sarmodel import SarModel, create_rows, write_model
 from vop.storage import create_hdf5, refuse_existing
 
@@ -34,6 +35,9 @@ def build_sar_model(
     *,
     rule: str = STANDARD,
     combine: str = "outer",
+    regions: Regions | None = None,
+    exposed: np.ndarray | None = None,
+    patient_mass_kg: float | None = None,
     annotate: Callable[[SarModel], Metadata] | None = None,
     path: str | os.PathLike[str] | None = None,
     force: bool = False,
@@ -42,7 +46,8 @@ def build_sar_model(
     """Local SAR matrices of a source, averaged over cubes of tissue.
 
     Q = (1/m) ∫ σ/2 conj(E_i) E_j dV over each cube, m its tissue mass; power and mass are averaged
-    apart and then divided. The absorbed-power matrix ∫ σ/2 conj(E_i) E_j dV over the body comes with it.
+    apart and then divided. With them come the matrices of whole volumes and of power of
+    :func:`vop.regions.global_matrices_by_region`.
 
     Parameters
     ----------
@@ -51,6 +56,8 @@ def build_sar_model(
     combine : where several samples of a component belong to a cell (nodes, edges): "outer" averages
         their outer products, "field" the complex samples first. By convexity the first is never
         smaller in the semidefinite order, hence the default.
+    regions, exposed, patient_mass_kg : for global matrices of the head, of the exposed part, and of a
+        body that the grid cuts off; each of the first two costs a second pass over the fields.
     annotate : gets the finished model and returns its final metadata; what it raises stops the build.
     path : write the model there, tile by tile, and return it mapped from disk; else it stays in memory.
 
@@ -71,13 +78,22 @@ def build_sar_model(
     shape = (len(cubes), source.n_channels**2)
 
     def finish(rows: np.ndarray) -> SarModel:
-        absorbed = _fill(rows, source, tiles, cubes, combine, progress)
+        absorbed = unpack(_fill(rows, source, tiles, cubes, combine, progress))
+        whole = global_matrices_by_region(
+            source,
+            regions,
+            exposed=exposed,
+            patient_mass_kg=patient_mass_kg,
+            combine=combine,
+            absorbed=absorbed,
+            progress=progress,
+        )
         model = SarModel(
             packed=rows,
-            metadata=_metadata(source, cubes, combine),
+            metadata=_metadata(source, cubes, combine).with_details(global_matrices=whole.record),
             cubes=cubes,
-            global_matrices={"absorbed power": unpack(absorbed)},
-            global_units={"absorbed power": "W per |w|^2"},
+            global_matrices={**whole.matrices, "absorbed power": absorbed},
+            global_units=whole.units,
         )
         return model if annotate is None else model.with_metadata(annotate(model))
 
@@ -197,9 +213,12 @@ def _tile_matrices(source: FieldSource, tile: _Tile, cubes: CubeGeometry, combin
 
 
 def _metadata(source: FieldSource, cubes: CubeGeometry, combine: str) -> Metadata:
-    quantity = source.conventions.reference
+    reference = Reference(source.conventions.reference, z0_ohm=source.z0_ohm)
+    if reference.unit in ("V", "A"):
+        # Fields were converted to peak per unit of w as the export wrote it: w stays what it was there.
+        reference = replace(reference, phasor=source.conventions.phasor)
     meta = Metadata(
-        reference=Reference(quantity, z0_ohm=source.z0_ohm),
+        reference=reference,
         channel_names=source.channel_names,
         domain=Domain(frequency_hz=float(source.frequency_hz)),
         details={

@@ -21,7 +21,7 @@ from vop.averaging.samples import read_samples
 from vop.errors import InputError
 from vop.fields import FieldSource, Tissue
 from vop.grid import RectilinearGrid
-from vop.hermitian import packed_entries, unpack
+from vop.hermitian import pack, packed_entries, unpack
 from vop.kernels.regions import region_powers
 from vop.progress import Progress, silent
 
@@ -240,6 +240,7 @@ def global_matrices_by_region(
     exposed: np.ndarray | None = None,
     patient_mass_kg: float | None = None,
     combine: str = "outer",
+    absorbed: np.ndarray | None = None,
     progress: Progress = silent,
 ) -> GlobalMatrices:
     """SAR of the whole body, the head and the exposed part, and powers, as matrices.
@@ -256,6 +257,8 @@ def global_matrices_by_region(
         (IEC 60601-2-33 defines it by 95 % of the absorbed power of a homogeneous filling; memory).
     patient_mass_kg : what whole-body SAR is averaged over; by default the mass of the model, which a
         body cut off by the grid makes too small and the SAR too large, never too small.
+    absorbed : (n, n), the absorbed power of the whole body where it is known already; without regions
+        and an exposed part no field is then read.
 
     Raises
     ------
@@ -273,16 +276,10 @@ def global_matrices_by_region(
         if exposed.shape != grid.shape or exposed.dtype != bool or not (exposed & tissue.body).any():
             raise InputError(f"exposed part: should be bools {grid.shape} (z, y, x) and hold some tissue")
         part += np.uint8(4) * exposed
-    powers = np.zeros((8, n * n))
-    first, second, imaginary = packed_entries(n)
-    boxes = list(_boxes(grid))
-    for done, box in enumerate(boxes, 1):
-        if tissue.body[box].any():
-            e, offsets, starts = read_samples(source, box, combine)
-            weight = 0.5 * tissue.conductivity_s_m[box].astype(np.float64) * grid.volumes_m3(box)
-            here = np.ascontiguousarray(part[box])
-            region_powers(e, offsets, starts, weight, here, first, second, imaginary, powers)
-        progress("global matrices", done, len(boxes))
+    if absorbed is not None and regions is None and exposed is None:
+        powers = np.concatenate([pack(absorbed)[None], np.zeros((7, n * n))])
+    else:
+        powers = _powers_by_part(source, part, combine, progress)
     mass = tissue.density_kg_m3.astype(np.float64) * grid.volumes_m3()
     masses = np.bincount(part.ravel(), weights=mass.ravel(), minlength=8)
     total = float(masses.sum())
@@ -316,6 +313,22 @@ def global_matrices_by_region(
     if exposed is not None:
         record["exposed_over_patient_mass"] = groups["partial body"][1] / patient
     return GlobalMatrices(matrices, units, record)
+
+
+def _powers_by_part(source: FieldSource, part: np.ndarray, combine: str, progress: Progress) -> np.ndarray:
+    """Packed absorbed power of the cells with part = 0 … 7, (8, n²) float64."""
+    grid, tissue = source.grid, source.tissue
+    powers = np.zeros((8, source.n_channels**2))
+    first, second, imaginary = packed_entries(source.n_channels)
+    boxes = list(_boxes(grid))
+    for done, box in enumerate(boxes, 1):
+        if tissue.body[box].any():
+            e, offsets, starts = read_samples(source, box, combine)
+            weight = 0.5 * tissue.conductivity_s_m[box].astype(np.float64) * grid.volumes_m3(box)
+            here = np.ascontiguousarray(part[box])
+            region_powers(e, offsets, starts, weight, here, first, second, imaginary, powers)
+        progress("global matrices", done, len(boxes))
+    return powers
 
 
 def _boxes(grid: RectilinearGrid) -> Sequence[tuple[slice, slice, slice]]:
