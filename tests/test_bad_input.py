@@ -202,3 +202,10 @@ def test_a_folder_that_vanishes_in_mid_read_is_one_line(export_folder: Path) -> 
     shutil.rmtree(export_folder)
     with pytest.raises(InputError, match="channel_01"):
         vop.build_sar_model(source)
+
+
+def test_fields_that_absorb_more_than_they_are_given_are_refused(tmp_path: Path) -> None:
+    write_channel_hdf5(tmp_path / "e", wave=1e-3)
+    with pytest.raises(InputError, match=r"passivity violated.*eigenvalue"):
+        vop.build_sar_model(_open(tmp_path / "e"), average_mass=None, path=tmp_path / "model.h5")
+    assert [f.name for f in tmp_path.iterdir()] == ["e"]

@@ -12,6 +12,7 @@ from numba import get_num_threads
 
 from vop.averaging.geometry import STANDARD, find_cubes
 from vop.averaging.samples import COMBINATIONS, read_samples
+from vop.checks import checked_metadata
 from vop.cubes import CubeGeometry
 from vop.errors import InputError
 from vop.fields import FieldSource
@@ -59,12 +60,13 @@ def build_sar_model(
     regions, exposed, patient_mass_kg : for global matrices of the head, of the exposed part, and of a
         body that the grid cuts off; each of the first two costs a second pass over the fields.
     annotate : gets the finished model and returns its final metadata; what it raises stops the build.
+        By default :func:`vop.checks.checked_metadata`, which refuses fields that break passivity.
     path : write the model there, tile by tile, and return it mapped from disk; else it stays in memory.
 
     Raises
     ------
     InputError
-        Where the field is not finite in tissue, or an argument is not known.
+        Where the field is not finite in tissue, passivity is broken, or an argument is not known.
     OutputError
         Where ``path`` exists and not ``force``, or cannot be written.
     """
@@ -95,7 +97,7 @@ def build_sar_model(
             global_matrices={**whole.matrices, "absorbed power": absorbed},
             global_units=whole.units,
         )
-        return model if annotate is None else model.with_metadata(annotate(model))
+        return model.with_metadata(annotate(model) if annotate else checked_metadata(model, source))
 
     if path is None:
         return finish(np.empty(shape, np.float32))

@@ -17,10 +17,9 @@ from typing import Any
 
 from vop import __version__
 from vop.build import build_sar_model
-from vop.checks import PowerChecks, check_power
+from vop.checks import checked_metadata
 from vop.compression import compress
 from vop.errors import InputError, OutputError
-from vop.fields import FieldSource
 from vop.handoff import export
 from vop.job import Job
 from vop.metadata import Metadata, digest
@@ -138,15 +137,17 @@ class _Chain:
             domain = job.settle_domain(source.frequency_hz, getattr(source, "b0_direction", None))
 
             def annotate(made: SarModel) -> Metadata:
-                checks = self._check(made, source)
-                metadata = replace(made.metadata, domain=domain).with_warnings(*checks.warnings)
+                metadata = checked_metadata(
+                    made.with_metadata(replace(made.metadata, domain=domain)),
+                    source,
+                    account=job.power_account,
+                    waiver=job.passivity_waiver,
+                )
                 if missing := domain.not_stated():
                     metadata = metadata.with_warnings(
                         f"domain of use not stated: {', '.join(missing)} (under [domain])"
                     )
-                return metadata.with_details(
-                    step=key, import_checks=checks.record(), import_check_lines=list(checks.lines)
-                )
+                return metadata.with_details(step=key)
 
             model = build_sar_model(
                 source,
@@ -158,15 +159,6 @@ class _Chain:
                 **job.model_options,
             )
         return model, tuple(model.metadata.details.get("import_check_lines", ()))
-
-    def _check(self, model: SarModel, source: FieldSource) -> PowerChecks:
-        return check_power(
-            model.global_matrices["absorbed power"],
-            model.metadata.reference.quantity,
-            source.scattering,
-            account=self.job.power_account,
-            waiver=self.job.passivity_waiver,
-        )
 
     def _set(self, model: SarModel) -> VopSet:
         job, path = self.job, self.job.folder / SET_FILE

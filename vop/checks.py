@@ -8,6 +8,9 @@ from typing import Any
 import numpy as np
 
 from vop.errors import InputError
+from vop.fields import FieldSource
+from vop.metadata import Metadata
+from vop.sarmodel import SarModel
 
 #: A voxel sum of a field of finite accuracy may exceed the watt by this much before it is refused.
 _PASSIVITY_ROUNDING = 1e-4
@@ -125,7 +128,33 @@ def check_power(
     return PowerChecks(values, own, accepted, beyond, tuple(lines), tuple(warnings))
 
 
-def tissue_masses_kg(source: Any) -> dict[str, float]:
+def checked_metadata(
+    model: SarModel,
+    source: FieldSource,
+    *,
+    account: str | None = None,
+    waiver: str | None = None,
+) -> Metadata:
+    """Metadata of a freshly built model with the outcome of :func:`check_power` in it.
+
+    Raises
+    ------
+    InputError
+        Where passivity is violated without a waiver.
+    """
+    checks = check_power(
+        model.global_matrices["absorbed power"],
+        model.metadata.reference.quantity,
+        source.scattering,
+        account=account,
+        waiver=waiver,
+    )
+    return model.metadata.with_warnings(*checks.warnings).with_details(
+        import_checks=checks.record(), import_check_lines=list(checks.lines)
+    )
+
+
+def tissue_masses_kg(source: FieldSource) -> dict[str, float]:
     """Mass by tissue name, kg; without labels the whole body under "body"."""
     tissue = source.tissue
     mass = source.grid.volumes_m3() * tissue.density_kg_m3
