@@ -100,11 +100,12 @@ def metadata(n: int) -> Metadata:
     return Metadata(Reference("forward power"), tuple(str(c + 1) for c in range(n)))
 
 
-def smooth_model(seed: int, n: int, count: int) -> vop.SarModel:
+def smooth_model(seed: int, n: int, count: int, harmonics: int = 3) -> vop.SarModel:
     """An invented model whose matrices change smoothly along a line of ``count`` points."""
     rng = np.random.default_rng(seed)
     s = np.linspace(0, 1, count)
-    waves = np.stack([np.ones(count), *(f(np.pi * k * s) for k in (1, 2, 3) for f in (np.sin, np.cos))])
+    steps = np.pi * np.arange(1, harmonics + 1)
+    waves = np.array([np.ones(count), *np.sin(np.outer(steps, s)), *np.cos(np.outer(steps, s))])
     shape = rng.normal(size=(len(waves), 3, n)) + 1j * rng.normal(size=(len(waves), 3, n))
     e = np.einsum("ws,wrn->srn", waves, shape)
     return vop.SarModel.from_matrices(np.einsum("sri,srj->sij", e.conj(), e))

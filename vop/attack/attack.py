@@ -23,7 +23,7 @@ _CLOSEST = 4
 #: Closest calls kept, and local maxima confirmed against the whole model.
 _KEPT = 64
 #: One covariance, and one local maximisation, for so many excitations; and the maximisation's steps.
-_PER_COVARIANCE, _PER_ASCENT, _STEPS = 8, 128, 80
+_PER_COVARIANCE, _PER_ASCENT, _STEPS = 8, 128, 60
 #: Short local maximisations that choose where the long ones start, for each of those.
 _TRIALS_PER_ASCENT, _TRIAL_STEPS = 4, 12
 _ASCENTS_AT_ONCE, _AT_ONCE = 64, 1 << 13
