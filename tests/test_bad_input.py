@@ -205,7 +205,10 @@ def test_a_folder_that_vanishes_in_mid_read_is_one_line(export_folder: Path) -> 
 
 
 def test_fields_that_absorb_more_than_they_are_given_are_refused(tmp_path: Path) -> None:
-    write_channel_hdf5(tmp_path / "e", wave=1e-3)
+    write_channel_hdf5(tmp_path / "e")
+    for file in (tmp_path / "e").glob("channel_*.h5"):
+        with h5py.File(file, "a") as handle:
+            handle.attrs["incident_wave"] = 1e-5 * handle.attrs["incident_wave"]
     with pytest.raises(InputError, match=r"passivity violated.*eigenvalue"):
         vop.build_sar_model(_open(tmp_path / "e"), average_mass=None, path=tmp_path / "model.h5")
     assert [f.name for f in tmp_path.iterdir()] == ["e"]
