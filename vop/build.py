@@ -19,6 +19,7 @@ from vop.fields import FieldSource
 from vop.grid import Box, RectilinearGrid
 from vop.hermitian import packed_entries, round_outward, unpack
 from vop.kernels.averaging import LANES, average_entries, signed_corners
+from vop.limits import LimitTable, as_fraction_of_limit
 from vop.metadata import Domain, Metadata, Reference
 from vop.progress import Progress, silent
 from vop.regions import Regions, global_matrices_by_region
@@ -39,6 +40,7 @@ def build_sar_model(
     regions: Regions | None = None,
     exposed: np.ndarray | None = None,
     patient_mass_kg: float | None = None,
+    limits: LimitTable | None = None,
     annotate: Callable[[SarModel], Metadata] | None = None,
     path: str | os.PathLike[str] | None = None,
     force: bool = False,
@@ -59,6 +61,8 @@ def build_sar_model(
         smaller in the semidefinite order, hence the default.
     regions, exposed, patient_mass_kg : for global matrices of the head, of the exposed part, and of a
         body that the grid cuts off; each of the first two costs a second pass over the fields.
+    limits : hold each matrix as a fraction of its region's limit (:func:`vop.limits.as_fraction_of_limit`);
+        needs ``regions``, and room in memory for all matrices at once.
     annotate : gets the finished model and returns its final metadata; what it raises stops the build.
         By default :func:`vop.checks.checked_metadata`, which refuses fields that break passivity.
     path : write the model there, tile by tile, and return it mapped from disk; else it stays in memory.
@@ -72,6 +76,8 @@ def build_sar_model(
     """
     if combine not in COMBINATIONS:
         raise InputError(f"combine {combine!r} is not known; choose one of {', '.join(COMBINATIONS)}")
+    if limits is not None and regions is None:
+        raise InputError("limits differ by region: state which voxels are head, trunk and extremity")
     if path is not None:
         refuse_existing(path, force)
     cubes = find_cubes(source.grid, source.tissue, average_mass, rule, progress)
@@ -99,6 +105,12 @@ def build_sar_model(
         )
         return model.with_metadata(annotate(model) if annotate else checked_metadata(model, source))
 
+    if limits is not None and regions is not None:
+        limited = as_fraction_of_limit(finish(np.empty(shape, np.float32)), regions, limits, progress)
+        if path is None:
+            return limited
+        limited.save(path, force)
+        return SarModel.load(path, verify=False)
     if path is None:
         return finish(np.empty(shape, np.float32))
     with create_hdf5(path, force) as handle:

@@ -22,10 +22,12 @@ from vop.compression import compress
 from vop.errors import InputError, OutputError
 from vop.handoff import export
 from vop.job import Job
+from vop.limits import load_limits
 from vop.metadata import Metadata, digest
 from vop.plugins import EXPORTERS, find, open_fields
 from vop.progress import Progress, silent
 from vop.proof import prove, recheck
+from vop.regions import load_regions
 from vop.sarmodel import SarModel
 from vop.storage import PARTIAL, file_digest, write_text
 from vop.summary import job_summary
@@ -113,6 +115,8 @@ class _Chain:
     def _model(self) -> tuple[SarModel, tuple[str, ...]]:
         job = self.job
         source = open_fields(job.input_path, job.reader, **job.reader_options)
+        regions = load_regions(job.regions_file, source.grid, source.tissue) if job.regions_file else None
+        limits = load_limits(job.limits_table) if job.limits_table else None
         key = digest(
             __version__,
             json.dumps(
@@ -124,6 +128,9 @@ class _Chain:
                     dict(job.model_options),
                     job.power_account,
                     job.passivity_waiver,
+                    job.patient_mass_kg,
+                    None if limits is None else limits.record(),
+                    None if regions is None else digest(regions.code.tobytes(), regions.excluded.tobytes()),
                 ],
                 sort_keys=True,
                 default=str,
@@ -152,6 +159,9 @@ class _Chain:
             model = build_sar_model(
                 source,
                 job.average_mass_kg,
+                regions=regions,
+                patient_mass_kg=job.patient_mass_kg,
+                limits=limits,
                 annotate=annotate,
                 path=path,
                 force=self.force,

@@ -37,6 +37,8 @@ _SCHEMA: dict[str, dict[str, type | tuple[type, ...]]] = {
         "expiry": str,
     },
     "model": {"average_mass_kg": (int, float), "rule": str, "combine": str},
+    "regions": {"file": str, "patient_mass_kg": (int, float)},
+    "limits": {"table": str},
     "compress": {"overestimation": (int, float), "method": str},
     "export": {"formats": list},
     "output": {"folder": str},
@@ -60,6 +62,9 @@ class Job:
     domain: Mapping[str, Any]
     average_mass_kg: float | None
     model_options: Mapping[str, Any]
+    regions_file: Path | None
+    patient_mass_kg: float | None
+    limits_table: str | Path | None
     overestimation: float
     method: str
     formats: tuple[str, ...]
@@ -128,11 +133,19 @@ def load_job(path: str | os.PathLike[str]) -> Job:
         domain={k: v for k, v in section["domain"].items() if k in _DOMAIN_KEYS},
         average_mass_kg=float(mass) or None,
         model_options={k: v for k, v in section["model"].items() if k != "average_mass_kg"},
+        regions_file=base / section["regions"]["file"] if "file" in section["regions"] else None,
+        patient_mass_kg=section["regions"].get("patient_mass_kg"),
+        limits_table=_table(section["limits"].get("table"), base),
         overestimation=float(section["compress"].get("overestimation", 0.05)),
         method=section["compress"].get("method", "clustering"),
         formats=formats,
         folder=base / section["output"].get("folder", "result"),
     )
+
+
+def _table(name: str | None, base: Path) -> str | Path | None:
+    # A mode of the standard by its name, else a file beside the job.
+    return base / name if name is not None and name.endswith(".toml") else name
 
 
 def _check(file: Path, raw: Mapping[str, Any]) -> None:

@@ -7,6 +7,7 @@ from pathlib import Path
 from typing import Any
 
 import h5py
+import numpy as np
 
 from vop import __version__
 from vop.fields import FieldSource
@@ -91,11 +92,13 @@ def model_lines(model: SarModel) -> list[str]:
         lines.append(f"averaging   {what}, rule {model.cubes.rule}")
         lines += [f"  {name:<34} {count:>9}" for name, count in model.cubes.counts().items()]
         lines += [f"  note: {note}" for note in model.cubes.notes]
-    for name in sorted(model.global_matrices):
-        trace = model.global_matrices[name].trace().real
-        lines.append(
-            f"global      {name}: trace {trace:.6g}, unit {model.global_units.get(name, 'not stated')}"
-        )
+    own = [name for name in model.global_matrices if name.startswith("forward power ")]
+    for name in sorted(set(model.global_matrices) - set(own)):
+        largest = float(np.linalg.eigvalsh(model.global_matrices[name])[-1])
+        unit = model.global_units.get(name, "not stated")
+        lines.append(f"global      {name}: largest eigenvalue {largest:.6g}, unit {unit}")
+    if own:
+        lines.append(f"global      forward power of each of {len(own)} channels")
     lines.append(f"digest      {model.digest()}")
     return [*lines, *_warnings(meta.warnings)]
 
