@@ -1,4 +1,4 @@
-"""An invented array: bent current elements at irregular places around a ball-shaped body part."""
+"""Invented arrays: strips and loops of short current elements at irregular places around a body part."""
 
 from __future__ import annotations
 
@@ -6,108 +6,95 @@ from dataclasses import dataclass
 
 import numpy as np
 from scipy.constants import c as speed_of_light
-from scipy.constants import mu_0
-from scipy.linalg import sqrtm
 
-from vop.demo.layered_sphere import Elements, Layer, LayeredSphere, Solution, free_space_field
+from vop.demo.layered_sphere import Elements
+from vop.errors import InputError
 
-#: Values at about 300 MHz, quoted from memory of the public tissue tables; good enough for a demo only.
-_TISSUES = {
-    "marrow": (5.8, 0.03, 1029.0),
-    "bone": (13.4, 0.083, 1908.0),
-    "cartilage": (46.8, 0.55, 1100.0),
-    "fluid": (69.0, 1.52, 1005.0),
-    "muscle": (58.2, 0.77, 1090.0),
-    "fat": (5.6, 0.04, 911.0),
-    "skin": (49.8, 0.64, 1109.0),
-}
+_KINDS = ("strip", "loop")
 
 
 @dataclass(frozen=True)
 class DemoArray:
-    """Channels of bent strips with a sinusoidal current, each a row of short elements.
+    """Channels bent to a former, each a row of short elements; where they are depends on ``seed`` alone.
 
-    n_channels : number of strips. radius_m : of the body part. gap_m : least and most distance from skin.
-    length_m : of a strip. n_elements : short elements per strip. seed : of the irregular placing.
+    n_channels : of them, at least 2.
+    former_m : least and most distance of a channel from the array's centre.
+    kinds : "strip" (sinusoidal current, zero at both ends) or "loop" (uniform current, as with many
+        capacitors), taken in turn.
+    strip_share, loop_share : length of a strip and radius of a loop, in units of the radius of a disc
+        as large as one channel's part of the former.
+    element_m : short elements are at most this long.
+    loss_ohm : series resistance of each channel; 0 is an array of perfect conductors.
     """
 
     n_channels: int = 8
-    radius_m: float = 0.073
-    gap_m: tuple[float, float] = (0.012, 0.014)
-    length_m: float = 0.140
-    n_elements: int = 14
+    former_m: tuple[float, float] = (0.080, 0.087)
+    kinds: tuple[str, ...] = _KINDS
+    strip_share: float = 2.2
+    loop_share: float = 0.65
+    element_m: float = 0.0065
+    loss_ohm: float = 0.0
     frequency_hz: float = 297.2e6
     seed: int = 7
 
-    def sphere(self) -> LayeredSphere:
-        """The layered ball: a joint-like core under muscle, fat and skin; thicknesses in mm."""
-        thickness = (
-            ("skin", 2.5),
-            ("fat", 5.0),
-            ("muscle", 12.0),
-            ("fluid", 2.5),
-            ("cartilage", 3.5),
-            ("bone", 5.0),
-        )
-        radius, layers = self.radius_m, []
-        for name, mm in thickness:
-            layers.append(Layer(name, radius, *_TISSUES[name]))
-            radius -= 1e-3 * mm
-        layers.append(Layer("marrow", radius, *_TISSUES["marrow"]))
-        return LayeredSphere(tuple(reversed(layers)), self.frequency_hz)
+    def __post_init__(self) -> None:
+        if self.n_channels < 2:
+            raise InputError(f"an array has at least 2 channels, got {self.n_channels}")
+        if not self.kinds or not set(self.kinds) <= set(_KINDS):
+            raise InputError(f"kinds of channels: {' and '.join(_KINDS)}, got {self.kinds}")
 
     def elements(self) -> tuple[Elements, np.ndarray]:
-        """All short elements for a peak current of 1 A in each strip, and the channel of each."""
+        """All short elements for a peak current of 1 A in each channel, from the array's centre, and the
+        channel of each."""
         rng = np.random.default_rng(self.seed)
-        positions, moments = [], []
-        # A Fibonacci lattice spreads the strips; turning and shifting each makes them irregular.
-        number = np.arange(self.n_channels)
-        height = 0.75 * (1 - (2 * number + 1) / self.n_channels)
-        angle = np.pi * (1 + 5**0.5) * number + rng.uniform(-0.25, 0.25, self.n_channels)
-        ring = np.sqrt(1 - height**2)
-        k = 2 * np.pi * self.frequency_hz / speed_of_light
+        positions, moments, owner = [], [], []
         for c in range(self.n_channels):
-            outward = np.array([ring[c] * np.cos(angle[c]), ring[c] * np.sin(angle[c]), height[c]])
-            east = np.cross([0.0, 0.0, 1.0], outward)
-            east /= np.linalg.norm(east)
-            turn = rng.uniform(-np.pi, np.pi)
-            along = np.cos(turn) * east + np.sin(turn) * np.cross(outward, east)
-            distance = self.radius_m + rng.uniform(*self.gap_m)
-            step = self.length_m / self.n_elements
-            s = (np.arange(self.n_elements) + 0.5) * step - self.length_m / 2
-            bend = s / distance
-            current = np.sin(k * (self.length_m / 2 - np.abs(s))) / np.sin(k * self.length_m / 2)
-            positions.append(distance * (np.cos(bend)[:, None] * outward + np.sin(bend)[:, None] * along))
-            direction = -np.sin(bend)[:, None] * outward + np.cos(bend)[:, None] * along
-            moments.append(step * current[:, None] * direction)
-        owner = np.repeat(number, self.n_elements)
-        return Elements(np.concatenate(positions), np.concatenate(moments).astype(complex)), owner
+            frame = self._frame(c, rng)
+            distance = rng.uniform(*self.former_m)
+            disc = 2 * distance / np.sqrt(self.n_channels)
+            if self.kinds[c % len(self.kinds)] == "strip":
+                at, moment = self._strip(distance, self.strip_share * disc)
+            else:
+                at, moment = self._loop(distance, self.loop_share * disc, rng.uniform(0.7, 1.4))
+            positions.append(at @ frame)
+            moments.append(moment @ frame)
+            owner += [c] * len(at)
+        return Elements(np.concatenate(positions), np.concatenate(moments).astype(complex)), np.array(owner)
 
+    def _frame(self, channel: int, rng: np.random.Generator) -> np.ndarray:
+        """Rows: two directions along the former and the outward one. A Fibonacci lattice spreads the
+        channels; shifting and turning each makes them irregular."""
+        height = 0.8 * (1 - (2 * channel + 1) / self.n_channels) + rng.uniform(-0.5, 0.5) / self.n_channels
+        angle = np.pi * (1 + 5**0.5) * channel + rng.uniform(-0.7, 0.7) / np.sqrt(self.n_channels)
+        ring = np.sqrt(1 - height**2)
+        outward = np.array([ring * np.cos(angle), ring * np.sin(angle), height])
+        east = np.cross([0.0, 0.0, 1.0], outward) / ring
+        north = np.cross(outward, east)
+        turn = rng.uniform(-np.pi, np.pi)
+        along = np.cos(turn) * east + np.sin(turn) * north
+        return np.stack([along, np.cross(outward, along), outward])
 
-def resistance_matrix(solution: Solution, elements: Elements, owner: np.ndarray) -> np.ndarray:
-    """R of the strips, (C, C) real symmetric, Ω: accepted power is ½ IᴴRI, radiated plus absorbed.
+    def _strip(self, distance: float, length: float) -> tuple[np.ndarray, np.ndarray]:
+        """Positions and moments in the frame of the strip, bent along x around the centre."""
+        count = int(np.ceil(length / self.element_m))
+        step = length / count
+        s = (np.arange(count) + 0.5) * step - length / 2
+        k = 2 * np.pi * self.frequency_hz / speed_of_light
+        current = np.sin(k * (length / 2 - np.abs(s))) / np.sin(k * length / 2)
+        sine, cosine, zero = np.sin(s / distance), np.cos(s / distance), np.zeros(count)
+        return (
+            distance * np.stack([sine, zero, cosine], 1),
+            (step * current)[:, None] * np.stack([cosine, zero, -sine], 1),
+        )
 
-    The strips are free of loss, so that what their currents give off (−½ Re ∫ E·J*) is all of it. E is
-    the free-space field, whose real part on the element itself is the radiation resistance of a short
-    dipole (ωμ0k/6π), plus what the sphere sends back.
-    """
-    sphere, count = solution.sphere, len(elements.position_m)
-    back = solution.field(elements, np.arange(count), count, elements.position_m, scattered=True)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        direct = free_space_field(sphere.k0, sphere.omega, elements, elements.position_m)
-    own = -sphere.omega * mu_0 * sphere.k0 / (6 * np.pi) * elements.moment
-    direct[np.arange(count), :, np.arange(count)] = own
-    between = -np.einsum("ia,jai->ij", elements.moment.conj(), back + direct).real
-    channels = int(owner.max()) + 1
-    r = np.zeros((channels, channels))
-    np.add.at(r, (owner[:, None], owner[None, :]), 0.5 * (between + between.T))
-    return r
-
-
-def decoupled_currents(resistance: np.ndarray) -> np.ndarray:
-    """(C, C) T with I = T w and accepted power wᴴw: T = (R/2)^(−1/2).
-
-    A lossless network that matches and decouples the strips: the S-matrix at its plugs is zero, forward
-    power is accepted power, and each plug still drives mostly its own strip.
-    """
-    return np.linalg.inv(np.real(sqrtm(0.5 * resistance)))
+    def _loop(self, distance: float, radius: float, stretch: float) -> tuple[np.ndarray, np.ndarray]:
+        """A closed oval on the sphere of radius ``distance``, of chords around each position."""
+        count = int(np.ceil(2 * np.pi * radius * max(stretch, 1) / self.element_m))
+        phi = 2 * np.pi * np.arange(count + 1) / count
+        flat = np.stack(
+            [radius * stretch * np.cos(phi), radius * np.sin(phi), np.full(count + 1, distance)], 1
+        )
+        corner = distance * flat / np.linalg.norm(flat, axis=1, keepdims=True)
+        # All at one distance, for speed: a chord's middle lies 0.1 mm lower.
+        middle = corner[1:] + corner[:-1]
+        return distance * middle / np.linalg.norm(middle, axis=1, keepdims=True), np.diff(corner, axis=0)
