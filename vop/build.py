@@ -27,7 +27,7 @@ from vop.sarmodel import SarModel, create_rows, write_model
 from vop.storage import create_hdf5, refuse_existing
 
 #: Memory for the fields of a tile, for its tables and for its results, each; sets the size of tiles.
-_BYTES = 400 << 20
+_BYTES = 256 << 20
 _LARGEST_TILE, _SMALLEST_TILE = 96, 8
 
 
@@ -206,6 +206,9 @@ def _tile_matrices(source: FieldSource, tile: _Tile, cubes: CubeGeometry, combin
     """Averaged matrices of a tile's cubes, and the absorbed power of its core as a last row: float64."""
     around = tile.around
     e, offsets, starts = read_samples(source, around, combine)
+    # Apart, so that the kernel runs along contiguous numbers of one kind.
+    re, im = np.ascontiguousarray(e.real), np.ascontiguousarray(e.imag)
+    del e
     weight = 0.5 * source.tissue.conductivity_s_m[around].astype(np.float64) * source.grid.volumes_m3(around)
     ez, ey, ex = (a[s.start : s.stop + 1] for a, s in zip(source.grid.edges_m, around, strict=True))
     z, y, x = (a[[s.start, s.stop]] for a, s in zip(source.grid.edges_m, tile.core, strict=True))
@@ -221,9 +224,30 @@ def _tile_matrices(source: FieldSource, tile: _Tile, cubes: CubeGeometry, combin
     tables = np.empty((workers, *shape))
     out = np.empty((len(boxes), len(first)))
     average_entries(
-        e, offsets, starts, weight, first, second, imaginary, cell, corner_weight, scale, tables, out
+        re,
+        im,
+        offsets,
+        starts,
+        weight,
+        _spans(weight),
+        first,
+        second,
+        imaginary,
+        cell,
+        corner_weight,
+        scale,
+        tables,
+        out,
     )
     return out[:, : len(entries[0])]
+
+
+def _spans(weight: np.ndarray) -> np.ndarray:
+    """First and one past the last cell of nonzero weight in each row, (nz, ny, 2) int64."""
+    filled = weight > 0
+    low = filled.argmax(axis=2)
+    high = weight.shape[2] - filled[:, :, ::-1].argmax(axis=2)
+    return np.stack([low, np.where(filled.any(axis=2), high, low)], axis=-1)
 
 
 def _metadata(source: FieldSource, cubes: CubeGeometry, combine: str) -> Metadata:

@@ -172,10 +172,10 @@ class FieldSource(ABC):
         scale = 1.0 / complex(self.channel_scale[channel])
         if self.conventions.phasor == "rms":
             scale *= np.sqrt(2.0)
-        values = np.multiply(raw, scale, dtype=np.complex128)
+        values = np.multiply(raw, np.complex64(scale), dtype=np.complex64)
         if self.conventions.time_sign == "-":
             np.conj(values, out=values)
-        return values.astype(np.complex64)
+        return values
 
     def describe(self) -> dict[str, Any]:
         """Plain record of what was read, for metadata and reports."""

@@ -15,7 +15,7 @@ from __future__ import annotations
 import math
 
 import numpy as np
-from numba import njit
+from numba import njit, prange
 
 from vop.errors import InputError
 
@@ -140,10 +140,10 @@ def pack_row(matrix, n, row):
             at += 1
 
 
-@njit(cache=True)
+@njit(cache=True, parallel=True)
 def _round_outward(packed, n, out):
     m = n * (n - 1) // 2
-    for r in range(packed.shape[0]):
+    for r in prange(packed.shape[0]):
         grow = np.zeros(n)
         at = n
         for i in range(n):

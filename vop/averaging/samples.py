@@ -50,9 +50,14 @@ def _read(source: FieldSource, around: Box) -> np.ndarray:
             for j in (0, 1):
                 for i in (0, 1):
                     touched |= np.roll(padded, (k, j, i), (0, 1, 2))
-    out = []
+    out = np.empty((source.n_channels, 3, *touched.shape), np.complex64)
+    untouched = ~touched
     for channel in range(source.n_channels):
         e = source.electric(channel, around)
+        e[:, untouched] = 0
+        out[channel] = e
+        if np.isfinite(e.view(np.float32).sum()):
+            continue
         bad = ~np.isfinite(e).all(axis=0) & touched
         if bad.any():
             at = [int(v) + s.start for v, s in zip(np.argwhere(bad)[0], around, strict=True)]
@@ -60,9 +65,7 @@ def _read(source: FieldSource, around: Box) -> np.ndarray:
                 f"field of channel {source.channel_names[channel]} is NaN or infinite at {int(bad.sum())} "
                 f"samples in tissue, the first at [z, y, x] = {at}; repair the export, or crop it away"
             )
-        e[:, ~touched] = 0
-        out.append(e)
-    return np.array(out)
+    return out
 
 
 def _mean_samples(e: np.ndarray, samples: tuple[tuple[tuple[int, int, int], ...], ...]) -> np.ndarray:

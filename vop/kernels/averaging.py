@@ -100,13 +100,49 @@ def signed_corners(ez, ey, ex, boxes, cell, weight):
 
 
 @njit(cache=True, nogil=True)
-def fill_block(e, offsets, starts, weight, first, second, imaginary, row, table):
+def combine_row(row, before, below, corner, here):
+    """Summed volumes along one row, from those of the three rows before it; arrays (nx + 1, LANES)."""
+    for b in range(LANES):
+        here[0, b] = 0.0
+    # One running sum per lane; eight names, so that they live in registers.
+    a0 = a1 = a2 = a3 = a4 = a5 = a6 = a7 = 0.0
+    for i in range(row.shape[1]):
+        a0 += row[0, i]
+        a1 += row[1, i]
+        a2 += row[2, i]
+        a3 += row[3, i]
+        a4 += row[4, i]
+        a5 += row[5, i]
+        a6 += row[6, i]
+        a7 += row[7, i]
+        here[i + 1, 0] = a0
+        here[i + 1, 1] = a1
+        here[i + 1, 2] = a2
+        here[i + 1, 3] = a3
+        here[i + 1, 4] = a4
+        here[i + 1, 5] = a5
+        here[i + 1, 6] = a6
+        here[i + 1, 7] = a7
+    for i in range(1, here.shape[0]):
+        for b in range(LANES):
+            here[i, b] += before[i, b] + (below[i, b] - corner[i, b])
+
+
+@njit(cache=True, nogil=True)
+def add_products(line, f, a, b, g, c, d):
+    """line += f·a·b + g·c·d, in float64."""
+    for i in range(line.size):
+        line[i] += f * (np.float64(a[i]) * np.float64(b[i])) + g * (np.float64(c[i]) * np.float64(d[i]))
+
+
+@njit(cache=True, nogil=True)
+def fill_block(re, im, offsets, starts, weight, span, first, second, imaginary, row, table):
     """Summed volumes of the absorbed power of LANES matrix entries, innermost in ``table``.
 
-    e : (n, 3, samples z, y, x) complex64, V/m.
+    re, im : (n, 3, samples z, y, x) float32, E in V/m.
     offsets : (S, 3) int64, starts : (4,) int64; component c of a cell has the samples
         offsets[starts[c] : starts[c+1]] relative to the cell's index; their outer products are averaged.
-    weight : (nz, ny, nx) float64, σ/2 times volume.
+    weight : (nz, ny, nx) float64, σ/2 times volume, zero outside span[k, j, 0] ≤ i < span[k, j, 1].
     first, second, imaginary : (LANES,) the entries: Re or Im of conj(E_first) E_second.
     row : (LANES, nx) float64 scratch. table : (nz+1, ny+1, nx+1, LANES) float64, written.
     """
@@ -115,37 +151,25 @@ def fill_block(e, offsets, starts, weight, first, second, imaginary, row, table)
     for k in range(nz):
         table[k + 1, 0] = 0.0
         for j in range(ny):
+            low, high = span[k, j]
             row[:] = 0.0
             for b in range(LANES):
+                # Slices that begin at 0: indices known to be positive let the compiler use vectors.
+                line, heavy = row[b, low:high], weight[k, j, low:high]
                 for c in range(3):
                     share = 1.0 / (starts[c + 1] - starts[c])
                     for s in range(starts[c], starts[c + 1]):
-                        kk, jj, ii = k + offsets[s, 0], j + offsets[s, 1], offsets[s, 2]
-                        p = e[first[b], c, kk, jj, ii : ii + nx]
-                        q = e[second[b], c, kk, jj, ii : ii + nx]
+                        kk, jj = k + offsets[s, 0], j + offsets[s, 1]
+                        a, z = low + offsets[s, 2], high + offsets[s, 2]
+                        p_re, p_im = re[first[b], c, kk, jj, a:z], im[first[b], c, kk, jj, a:z]
+                        q_re, q_im = re[second[b], c, kk, jj, a:z], im[second[b], c, kk, jj, a:z]
                         if imaginary[b]:
-                            for i in range(nx):
-                                row[b, i] += share * (
-                                    np.float64(p[i].real) * np.float64(q[i].imag)
-                                    - np.float64(p[i].imag) * np.float64(q[i].real)
-                                )
+                            add_products(line, share, p_re, q_im, -share, p_im, q_re)
                         else:
-                            for i in range(nx):
-                                row[b, i] += share * (
-                                    np.float64(p[i].real) * np.float64(q[i].real)
-                                    + np.float64(p[i].imag) * np.float64(q[i].imag)
-                                )
-            before, below, corner = table[k + 1, j], table[k, j + 1], table[k, j]
-            here = table[k + 1, j + 1]
-            here[0] = 0.0
-            for b in range(LANES):
-                run = 0.0
-                for i in range(nx):
-                    run += weight[k, j, i] * row[b, i]
-                    row[b, i] = run
-            for i in range(nx):
-                for b in range(LANES):
-                    here[i + 1, b] = row[b, i] + before[i + 1, b] + (below[i + 1, b] - corner[i + 1, b])
+                            add_products(line, share, p_re, q_re, share, p_im, q_im)
+                for i in range(line.size):
+                    line[i] *= heavy[i]
+            combine_row(row, table[k + 1, j], table[k, j + 1], table[k, j], table[k + 1, j + 1])
 
 
 @njit(cache=True, nogil=True)
@@ -176,7 +200,7 @@ def block_integrals(table, cell, weight, scale, out, at):
 
 @njit(cache=True, nogil=True, parallel=True)
 def average_entries(
-    e, offsets, starts, weight, first, second, imaginary, cell, corner_weight, scale, tables, out
+    re, im, offsets, starts, weight, span, first, second, imaginary, cell, corner_weight, scale, tables, out
 ):
     """Averages of all matrix entries over all boxes of a tile.
 
@@ -189,7 +213,19 @@ def average_entries(
         row = np.empty((LANES, weight.shape[2]))
         for b in range(t, blocks, workers):
             part = slice(b * LANES, (b + 1) * LANES)
-            fill_block(e, offsets, starts, weight, first[part], second[part], imaginary[part], row, tables[t])
+            fill_block(
+                re,
+                im,
+                offsets,
+                starts,
+                weight,
+                span,
+                first[part],
+                second[part],
+                imaginary[part],
+                row,
+                tables[t],
+            )
             block_integrals(tables[t], cell, corner_weight, scale, out, b * LANES)
 
 
