@@ -7,6 +7,7 @@ from dataclasses import replace
 from pathlib import Path
 
 import h5py
+import numba
 import numpy as np
 import pytest
 from scipy.constants import mu_0
@@ -120,6 +121,15 @@ def test_forward_power_is_what_leaves_the_elements() -> None:
     assert np.allclose(given, np.eye(3), atol=1e-7)
 
 
+def test_lost_power_is_half_the_resistance_times_peak_current_squared() -> None:
+    # Source: P = ½ R |I|² for peak phasors, any handbook.
+    elements, owner = SMALL.elements()
+    solution = Solution.around(Ball().sphere(SMALL.frequency_hz), elements, 1e-4)
+    current = np.array([1.0, 2.0j, -3.0])
+    lost = ArrayPower.of(solution, elements, owner, 4.0).lost_w
+    assert (current.conj() @ lost @ current).real == pytest.approx(0.5 * 4.0 * (1 + 4 + 9))
+
+
 def test_no_charge_is_left_on_a_loop_and_strips_end_without_current() -> None:
     elements, owner = DemoArray(n_channels=2).elements()
     strip, loop = (Elements(elements.position_m[owner == c], elements.moment[owner == c]) for c in (0, 1))
@@ -210,9 +220,14 @@ def test_force_never_touches_a_real_export(tmp_path: Path) -> None:
     assert not (tmp_path / "JOB.toml").exists()
 
 
-def test_the_same_array_gives_the_same_bytes(tmp_path: Path) -> None:
-    for name in ("one", "two"):
-        write_demo(tmp_path / name, array=LOSSY, step_m=0.012)
+def test_the_same_array_gives_the_same_bytes_with_any_number_of_threads(tmp_path: Path) -> None:
+    threads = numba.get_num_threads()
+    for name, count in (("one", 1), ("two", threads)):
+        numba.set_num_threads(count)
+        try:
+            write_demo(tmp_path / name, array=LOSSY, step_m=0.012)
+        finally:
+            numba.set_num_threads(threads)
     for file in sorted((tmp_path / "one").rglob("*")):
         if file.is_file():
             assert file.read_bytes() == (tmp_path / "two" / file.relative_to(tmp_path / "one")).read_bytes()
