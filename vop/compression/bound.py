@@ -31,13 +31,33 @@ from fractions import Fraction
 import numpy as np
 
 from vop.errors import InputError
-from vop.hermitian import U32, identity, inner_weights, pack, round_outward, unpack
+from vop.hermitian import (
+    U32,
+    channels_from_width,
+    identity,
+    inner_weights,
+    pack,
+    round_outward,
+    unpack,
+)
 from vop.kernels.eigen import back_transform, eigensystem
-from vop.kernels.worst_case import congruence, frobenius_norms, largest_eigenvalue
+from vop.kernels.worst_case import congruence, frobenius_norms
+from vop.parallel import map_chunks
+from vop.progress import silent
 from vop.sarmodel import CHUNK_ROWS
 
 #: Below this, float32 numbers at 2⁻²⁴ of the worst case would near the subnormal ones.
 LEAST_WORST_CASE = 1e-25
+
+
+def as_rows(packed: np.ndarray) -> np.ndarray:
+    """A read-only view of packed float32 rows, copied only if not contiguous and aligned.
+
+    Kernels are then compiled for one kind of array, be it a memory map or not.
+    """
+    rows = np.require(packed, np.float32, ["C", "A"]).view(np.ndarray)
+    rows.flags.writeable = False
+    return rows
 
 
 def frobenius(packed: np.ndarray) -> np.ndarray:
@@ -48,12 +68,13 @@ def frobenius(packed: np.ndarray) -> np.ndarray:
     InputError
         Names the first row that holds NaN or infinity.
     """
-    n_rows, width = packed.shape
-    gain = inner_weights(round(width**0.5))
-    norms = np.empty(n_rows)
-    for start in range(0, n_rows, CHUNK_ROWS):
-        rows = np.ascontiguousarray(packed[start : start + CHUNK_ROWS])
-        frobenius_norms(rows, gain, norms[start : start + CHUNK_ROWS])
+    rows, norms = as_rows(packed), np.empty(len(packed))
+    gain = inner_weights(channels_from_width(packed.shape[1]))
+
+    def work(first: int, last: int) -> None:
+        frobenius_norms(rows, gain, first, last, norms)
+
+    map_chunks("", len(rows), CHUNK_ROWS, work, silent)
     bad = np.flatnonzero(~np.isfinite(norms))
     if bad.size:
         raise InputError(f"matrix {int(bad[0])} of the model holds NaN or infinite values")
@@ -61,7 +82,7 @@ def frobenius(packed: np.ndarray) -> np.ndarray:
 
 
 def worst_case(packed: np.ndarray, norms: np.ndarray) -> tuple[float, int]:
-    """Largest λmax, from below to one rounding, and the row that attains it (the first if several do).
+    """Largest λmax, from below to one rounding, and a row that attains it.
 
     Parameters
     ----------
@@ -71,30 +92,35 @@ def worst_case(packed: np.ndarray, norms: np.ndarray) -> tuple[float, int]:
     -------
     (value, row) : value ≤ λmax(Q_row) is proved; W/kg per |w|².
     """
-    n = round(packed.shape[1] ** 0.5)
-    best, best_row = -np.inf, -1
+    best, best_row, best_vector = -np.inf, -1, np.zeros(0, np.complex128)
     for row in np.argsort(-norms, kind="stable"):
         if norms[row] * (1 + 1e-12) < best:
             break
-        value = float(largest_eigenvalue(np.asarray(packed[row]), n))
-        if value > best or (value == best and row < best_row):
-            best, best_row = value, int(row)
-    return _quotient_from_below(np.asarray(packed[best_row]), n), best_row
+        value, vector = _leading(unpack(packed[row]))
+        if value > best:
+            best, best_row, best_vector = value, int(row), vector
+    return _quotient_from_below(unpack(packed[best_row]), best_vector), best_row
 
 
-def _quotient_from_below(row: np.ndarray, n: int) -> float:
-    q = unpack(row)
-    h, e, z = q.copy(), np.empty(n, np.complex128), np.empty((n, n))
+def _leading(q: np.ndarray) -> tuple[float, np.ndarray]:
+    """Largest eigenvalue of (n, n) Hermitian q and its eigenvector, both to rounding."""
+    n = len(q)
+    h, e, z, w = q.copy(), np.empty(n, np.complex128), np.empty((n, n)), np.empty(n, np.complex128)
     d, f, tau = np.empty(n), np.empty(n), np.empty(n)
     eigensystem(h, n, d, e, f, tau, z)
-    w = np.empty(n, np.complex128)
-    back_transform(h, n, e, tau, z[int(np.argmax(d))], w)
+    top = int(np.argmax(d))
+    back_transform(h, n, e, tau, z[top], w)
+    return float(d[top]), w
+
+
+def _quotient_from_below(q: np.ndarray, w: np.ndarray) -> float:
+    """The largest float64 not above wᴴQw/wᴴw, in rational arithmetic."""
     re = [Fraction(float(v)) for v in w.real]
     im = [Fraction(float(v)) for v in w.imag]
     power = Fraction(0)
-    for i in range(n):
+    for i in range(len(w)):
         power += Fraction(float(q[i, i].real)) * (re[i] ** 2 + im[i] ** 2)
-        for j in range(i + 1, n):
+        for j in range(i + 1, len(w)):
             power += 2 * Fraction(float(q[i, j].real)) * (re[i] * re[j] + im[i] * im[j])
             power -= 2 * Fraction(float(q[i, j].imag)) * (re[i] * im[j] - im[i] * re[j])
     exact = power / sum((a * a + b * b for a, b in zip(re, im, strict=True)), Fraction(0))
@@ -161,7 +187,7 @@ class Coordinates:
             Where the hair would eat half of ε: too small an ε for float32 files, or S too
             ill-conditioned.
         """
-        n = round(packed.shape[1] ** 0.5)
+        n = channels_from_width(packed.shape[1])
         scalar = float(s_row[0])
         if np.array_equal(s_row, scalar * identity(n)):
             units = worst / scalar + epsilon
@@ -181,12 +207,15 @@ class Coordinates:
 
     def back(self, delivered: np.ndarray) -> np.ndarray:
         """Delivered matrices (K, n²) float64 of a method, as stored: (K, n²) float32, hair added."""
-        n = round(delivered.shape[1] ** 0.5)
-        out = np.array(delivered, dtype=np.float64, order="C")
-        if self.root is not None:
-            out = np.empty_like(delivered)
-            congruence(np.ascontiguousarray(delivered), n, self.root, out)
-        return round_outward(out + self.delta * self.s_row)
+        n = channels_from_width(delivered.shape[1])
+        out = np.empty(delivered.shape, np.float32)
+        for start in range(0, len(out), CHUNK_ROWS):
+            part = np.array(delivered[start : start + CHUNK_ROWS], dtype=np.float64, order="C")
+            if self.root is not None:
+                congruence(part, n, self.root, part)
+            part += self.delta * self.s_row
+            out[start : start + CHUNK_ROWS] = round_outward(part)
+        return out
 
 
 def _require_room(epsilon: float, hair: float, n: int, kappa: float) -> None:
@@ -200,12 +229,13 @@ def _require_room(epsilon: float, hair: float, n: int, kappa: float) -> None:
 
 
 def _transformed(packed: np.ndarray, inverse_root: np.ndarray) -> np.ndarray:
-    n = inverse_root.shape[0]
+    n = len(inverse_root)
     out = np.empty(packed.shape, dtype=np.float32)
-    wide = np.empty((min(CHUNK_ROWS, len(packed)), packed.shape[1]))
-    for start in range(0, len(packed), CHUNK_ROWS):
-        rows = np.ascontiguousarray(packed[start : start + CHUNK_ROWS])
-        part = wide[: len(rows)]
-        congruence(rows, n, inverse_root, part)
-        out[start : start + CHUNK_ROWS] = round_outward(part)
+
+    def work(first: int, last: int) -> None:
+        part = np.array(packed[first:last], dtype=np.float64, order="C")
+        congruence(part, n, inverse_root, part)
+        out[first:last] = round_outward(part)
+
+    map_chunks("", len(packed), 1 << 12, work, silent)
     return out

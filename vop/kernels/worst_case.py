@@ -1,23 +1,22 @@
-"""Scanning all matrices once: finiteness, Frobenius norms, congruences."""
+"""Passes over all matrices: Frobenius norms, congruences."""
 
 from __future__ import annotations
 
 import math
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 
 from vop.hermitian import pack_row, unpack_row
-from vop.kernels.eigen import eigenvalues
 
 
-@njit(cache=True, parallel=True, nogil=True, error_model="numpy")
-def frobenius_norms(packed, gain, out):
-    """Frobenius norms, (N,) float64, of packed float32 rows (N, n²); NaN or infinite rows give such.
+@njit(cache=True, nogil=True, error_model="numpy")
+def frobenius_norms(packed, gain, first, last, out):
+    """Frobenius norms of rows first … last − 1 of ``packed`` (N, n²) float32 into ``out`` (N,).
 
-    gain : (n²,) float64, :func:`vop.hermitian.inner_weights`.
+    gain : (n²,) float64, :func:`vop.hermitian.inner_weights`. NaN or infinity in a row gives such.
     """
-    for r in prange(packed.shape[0]):
+    for r in range(first, last):
         total = 0.0
         for p in range(packed.shape[1]):
             value = np.float64(packed[r, p])
@@ -26,21 +25,11 @@ def frobenius_norms(packed, gain, out):
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def largest_eigenvalue(row, n):
-    """λmax of one packed row, float64, within a small multiple of n·2⁻⁵³·‖Q‖."""
-    h = np.empty((n, n), dtype=np.complex128)
-    d, f, tau = np.empty(n), np.empty(n), np.empty(n)
-    unpack_row(row, n, h)
-    eigenvalues(h, n, d, np.empty(n, dtype=np.complex128), f, tau)
-    return d.max()
-
-
-@njit(cache=True, parallel=True, nogil=True, error_model="numpy")
 def congruence(packed, n, m, out):
-    """out_r = pack(M Q_r Mᴴ) for packed rows (N, n²) of either float width; out (N, n²) float64."""
-    for r in prange(packed.shape[0]):
-        q = np.empty((n, n), dtype=np.complex128)
-        half = np.empty((n, n), dtype=np.complex128)
+    """out_r = pack(M Q_r Mᴴ) for packed rows (R, n²) float64; out (R, n²) float64 may be ``packed``."""
+    q = np.empty((n, n), dtype=np.complex128)
+    half = np.empty((n, n), dtype=np.complex128)
+    for r in range(packed.shape[0]):
         unpack_row(packed[r], n, q)
         for i in range(n):
             for j in range(n):
