@@ -25,6 +25,7 @@ _COMMANDS = {
     "demo": "Write an invented array around an invented body part, and run it.",
     "inspect": "Say what an export holds, how it is read, and whether its power adds up.",
     "model": "Local SAR matrices from an export.",
+    "rebase": "The same model under other excitations: matched or closed ports, any matrix.",
     "compress": "A set of VOPs from a model.",
     "prove": "Prove that a set is safe for a model, and no more conservative than its bound.",
     "attack": "Search for excitations that break a set.",

@@ -146,7 +146,7 @@ def fill_block(re, im, offsets, starts, weight, span, first, second, imaginary, 
     first, second, imaginary : (LANES,) the entries: Re or Im of conj(E_first) E_second.
     row : (LANES, nx) float64 scratch. table : (nz+1, ny+1, nx+1, LANES) float64, written.
     """
-    nz, ny, nx = weight.shape
+    nz, ny = weight.shape[:2]
     table[0] = 0.0
     for k in range(nz):
         table[k + 1, 0] = 0.0
