@@ -127,9 +127,8 @@ class ChannelHdf5Source(FieldSource):
         self._network_file = found[0] if found else None
         if self._network_file is None:
             return
-        from vop.network import read_touchstone
-
         from vop.errors import PluginError
+        from vop.network import read_touchstone
 
         try:
             network = read_touchstone(self._network_file, self.frequency_hz)
