@@ -29,7 +29,9 @@ from vop.progress import Progress
 #: Most clusters that grow at once, and most candidates that they may have together.
 _MOST_AT_ONCE = 64
 _MOST_CANDIDATES = 1 << 22
-KEEP_ON = False
+#: The published method closes a cluster at the first refusal. To look further costs little and gives
+#: fewer clusters; all that is accepted is accepted by the same rule.
+_PATIENCE = 32
 
 
 def run(problem: Problem, progress: Progress) -> CompressionResult:
@@ -46,8 +48,9 @@ class _Open(NamedTuple):
     found: np.ndarray
     keys: np.ndarray
     marks: np.ndarray
-    growth: np.ndarray
+    known: np.ndarray
     dirty: np.ndarray
+    growth: np.ndarray
 
 
 def _joined(parts: list[_Open]) -> _Open:
@@ -70,27 +73,26 @@ class _Clustering:
         order = self._order()
         self.screen = Screen(self.packed, self.n, self.problem.bound, order)
         current = self._fresh(np.zeros(0, np.int64))
-        at, at_once, left = 0, 2 * self.threads, self.n_rows
+        at, at_once, left = 0, 1, self.n_rows
         cores: list[np.ndarray] = []
         delivered: list[np.ndarray] = []
         count = 0
         while left:
             fresh, at = kernels.next_alive(order, at, self.alive, at_once - len(current.cores))
             current = self._grown(current, fresh)
-            closed, state = kernels.commit(
-                current.cores, current.offsets, current.found, current.marks, KEEP_ON, self.alive, current.dirty
+            first, closed = kernels.commit(
+                *current[:3], current.marks, current.known, current.dirty, self.alive
             )
-            done = np.flatnonzero(state == 1)
-            cores.append(current.cores[done])
-            delivered.append(self.packed[cores[-1]] + current.growth[done])
-            count += len(done)
+            cores.append(current.cores[closed])
+            delivered.append(self.packed[cores[-1]] + current.growth[closed])
+            count += len(cores[-1])
             if self.problem.limit is not None and count > self.problem.limit:
                 raise TooManyVops
             left = int(np.count_nonzero(self.alive))
             self.progress("clustering", self.n_rows - left, self.n_rows)
             most = min(_MOST_AT_ONCE, _MOST_CANDIDATES * len(current.cores) // max(1, len(current.found)))
-            at_once = max(2 * self.threads, min(most, 2 * closed))
-            current = _Open(*kernels.still_open(closed, *current, self.alive))
+            at_once = min(max(2 * self.threads, min(most, 2 * first)), _MOST_AT_ONCE)
+            current = _Open(*kernels.still_open(first, *current, self.alive))
             if left:
                 self.screen.refresh(self.alive, left)
         return CompressionResult(np.concatenate(delivered), np.concatenate(cores), {})
@@ -107,6 +109,7 @@ class _Clustering:
         return np.argsort(-largest, kind="stable")
 
     def _fresh(self, cores: np.ndarray) -> _Open:
+        """Clusters grown around ``cores`` as if each were alone."""
         offsets, found, keys = self.screen.candidates(cores, self.alive)
         n_cores = len(cores)
         part = _Open(
@@ -114,33 +117,25 @@ class _Clustering:
             offsets,
             found,
             keys,
-            np.zeros(len(found), np.int8),
-            np.empty((n_cores, self.n**2)),
-            np.zeros(n_cores, np.bool_),
+            marks=np.zeros(len(found), np.int8),
+            known=np.zeros(n_cores, np.int64),
+            dirty=np.ones(n_cores, np.bool_),
+            growth=np.empty((n_cores, self.n**2)),
         )
         self._grow(part, np.arange(n_cores))
         return part
 
     def _grow(self, part: _Open, chosen: np.ndarray) -> None:
-        kernels.grow(
-            *part[:4],
-            chosen,
-            self.packed,
-            self.n,
-            self.problem.bound,
-            0.25 * self.problem.tolerance,
-            KEEP_ON,
-            part.marks,
-            part.growth,
-        )
+        problem = self.problem
+        tolerance = 0.25 * problem.tolerance
+        kernels.grow(*part, chosen, self.packed, self.n, problem.bound, tolerance, _PATIENCE)
 
     def _grown(self, current: _Open, fresh: np.ndarray) -> _Open:
-        """``current``, its dirty clusters grown again, and clusters around the cores ``fresh``."""
+        """``current``, where an earlier cluster took a candidate grown again, and clusters around ``fresh``."""
         n_parts = 2 * self.threads
-        dirty = np.flatnonzero(current.dirty)
-        again = [self.pool.submit(self._grow, current, part) for part in np.array_split(dirty, n_parts) if len(part)]
-        new = [self.pool.submit(self._fresh, part) for part in np.array_split(fresh, n_parts) if len(part)]
-        for future in again:
-            future.result()
-        current.dirty[:] = False
-        return _joined([current, *(future.result() for future in new)])
+        again = np.flatnonzero(current.dirty)
+        tasks = [self.pool.submit(self._grow, current, p) for p in np.array_split(again, n_parts) if len(p)]
+        new = [self.pool.submit(self._fresh, p) for p in np.array_split(fresh, n_parts) if len(p)]
+        for task in tasks:
+            task.result()
+        return _joined([current, *(task.result() for task in new)])

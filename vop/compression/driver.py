@@ -96,7 +96,8 @@ def compress(
     epsilon = _epsilon(overestimation, bound_w_kg, overestimation_matrix, worst)
     limit = _limit(max_vops)
     s_row = overestimation_row(overestimation_matrix, n, worst)
-    key = digest(__version__, model.digest(), method, s_row.tobytes())
+    model_digest = model.digest()
+    key = digest(__version__, model_digest, method, s_row.tobytes())
     saved = Checkpoint(checkpoint, key)
     task = _Task(run, model.packed, n, s_row, worst, saved, progress)
     answer = task.at(epsilon, None) if limit is None else _fewest_bound(task, epsilon, limit)
@@ -108,7 +109,7 @@ def compress(
         "hair": answer.epsilon - answer.coordinates.epsilon_prime,
         "worst_case_row": worst_row,
         "overestimation_matrix": "worst case times identity" if overestimation_matrix is None else "given",
-        "model_digest": model.digest(),
+        "model_digest": model_digest,
         **answer.result.details,
     }
     if limit is not None:

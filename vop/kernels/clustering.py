@@ -305,7 +305,9 @@ def _sink(found, keys, first, place, count):
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def grow(cores, offsets, found, keys, chosen, packed, n, bound, tolerance, keep_on, marks, growth):
+def grow(
+    cores, offsets, found, keys, marks, known, dirty, growth, chosen, packed, n, bound, tolerance, patience
+):
     """Grow clusters: Z = 0; for each candidate, Z + (Q − B − Z)₊ if λmax of that is at most bound.
 
     Parameters
@@ -313,8 +315,10 @@ def grow(cores, offsets, found, keys, chosen, packed, n, bound, tolerance, keep_
     cores, offsets, found, keys : of :func:`candidates_of`. chosen : indices of the cores to do.
     tolerance : Q ⪯ B + Z + tolerance counts as dominated, λmax(Z) ≤ bound + tolerance as accepted; of
         the positive part, eigenvalues below half of it are left out.
-    keep_on : whether a refused candidate is passed over (else it ends the cluster).
+    patience : so many refusals without growth between them end the cluster.
     marks : (C,) int8, written: OUTSIDE, FREE (dominated already), GREW, REFUSED.
+    known : (P,) int64, so many marks at the beginning of each cluster stand already; written.
+    dirty : (P,) bool, written False.
     growth : (P, n²) float64, written: Z packed.
     """
     width = n * n
@@ -328,35 +332,38 @@ def grow(cores, offsets, found, keys, chosen, packed, n, bound, tolerance, keep_
         for i in range(n):
             for k in range(i, n):
                 z[i, k] = 0.0
-        over = False
+        refusals = 0
         for t in range(offsets[c], offsets[c + 1]):
-            if over:
+            stands = t < offsets[c] + known[c]
+            if refusals >= patience:
                 marks[t] = OUTSIDE
-                continue
-            if keys[t] >= 0.0:
+            elif not stands and keys[t] >= 0.0:
                 marks[t] = FREE
-                continue
-            q = packed[found[t]]
-            for p in range(width):
-                row[p] = np.float64(q[p]) - np.float64(core[p])
-            unpack_row(row, n, excess)
-            if _dominates(z, excess, tolerance, n, h):
-                marks[t] = FREE
-                continue
-            for i in range(n):
-                for k in range(i, n):
-                    h[k, i] = (excess[i, k] - z[i, k]).conjugate()
-                    more[i, k] = z[i, k]
-            accepted = add_positive_part(h, n, 0.5 * tolerance, more, real, vectors, e, v)
-            # What the eigenvectors should have made true is checked, not trusted.
-            accepted = accepted and _at_most(more, bound + tolerance, n, h)
-            accepted = accepted and _dominates(more, excess, tolerance, n, h)
-            if accepted:
-                marks[t] = GREW
-                z, more = more, z
-            else:
-                marks[t] = REFUSED
-                over = not keep_on
+            elif not stands or marks[t] == GREW:
+                q = packed[found[t]]
+                for p in range(width):
+                    row[p] = np.float64(q[p]) - np.float64(core[p])
+                unpack_row(row, n, excess)
+                if not stands and _dominates(z, excess, tolerance, n, h):
+                    marks[t] = FREE
+                else:
+                    for i in range(n):
+                        for k in range(i, n):
+                            h[k, i] = (excess[i, k] - z[i, k]).conjugate()
+                            more[i, k] = z[i, k]
+                    good = add_positive_part(h, n, 0.5 * tolerance, more, real, vectors, e, v)
+                    # What the eigenvectors should have made true is checked, not trusted.
+                    good = good and _at_most(more, bound + tolerance, n, h)
+                    good = good and _dominates(more, excess, tolerance, n, h)
+                    marks[t] = GREW if good else REFUSED
+                    if good:
+                        z, more = more, z
+            if marks[t] == REFUSED:
+                refusals += 1
+            elif marks[t] == GREW:
+                refusals = 0
+        known[c] = offsets[c + 1] - offsets[c]
+        dirty[c] = False
         pack_row(z, n, growth[c])
 
 
@@ -437,35 +444,38 @@ def next_alive(order, at, alive, count):
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def commit(cores, offsets, found, marks, keep_on, alive, dirty):
+def commit(cores, offsets, found, marks, known, dirty, alive):
     """Close clusters in order, as far as those before leave them as they were grown.
 
-    alive : (N,) bool, written: members die. dirty : (P,) bool, written: to be grown again.
-    Returns (closed, state): how many cores are settled, and state (P,) int8: 1 closed, 0 gone with
-    an earlier cluster.
+    alive : (N,) bool, written: members die. dirty : (P,) bool, set where an earlier cluster took a
+    candidate that counted; known : (P,) int64, written: marks that stand nevertheless.
+    Returns (first, closed): the first core that is not settled, and whether each core was closed.
     """
-    state = np.zeros(cores.shape[0], dtype=np.int8)
-    closed = cores.shape[0]
-    for c in range(cores.shape[0]):
+    n_cores = cores.shape[0]
+    closed = np.zeros(n_cores, dtype=np.bool_)
+    first = n_cores
+    for c in range(n_cores):
         if not alive[cores[c]]:
             continue
-        for t in range(offsets[c], offsets[c + 1]):
-            if not alive[found[t]] and (marks[t] == GREW or (marks[t] == REFUSED and not keep_on)):
+        for t in range(offsets[c], offsets[c] + known[c]):
+            if not alive[found[t]] and (marks[t] == GREW or marks[t] == REFUSED):
+                known[c] = t - offsets[c]
                 dirty[c] = True
+                break
         if dirty[c]:
-            closed = min(closed, c)
-        if closed < cores.shape[0]:
+            first = min(first, c)
+        if first < n_cores:
             continue
         alive[cores[c]] = False
         for t in range(offsets[c], offsets[c + 1]):
             if marks[t] == FREE or marks[t] == GREW:
                 alive[found[t]] = False
-        state[c] = 1
-    return closed, state
+        closed[c] = True
+    return first, closed
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def still_open(first, cores, offsets, found, keys, marks, growth, dirty, alive):
+def still_open(first, cores, offsets, found, keys, marks, known, dirty, growth, alive):
     """The clusters from ``first`` on whose core is alive, with the candidates that are."""
     n_cores, total = 0, 0
     for c in range(first, cores.shape[0]):
@@ -473,8 +483,8 @@ def still_open(first, cores, offsets, found, keys, marks, growth, dirty, alive):
             n_cores += 1
             for t in range(offsets[c], offsets[c + 1]):
                 total += alive[found[t]]
-    cores_left, dirty_left = np.empty(n_cores, dtype=np.int64), np.empty(n_cores, dtype=np.bool_)
-    offsets_left = np.zeros(n_cores + 1, dtype=np.int64)
+    cores_left, known_left = np.empty(n_cores, dtype=np.int64), np.zeros(n_cores, dtype=np.int64)
+    offsets_left, dirty_left = np.zeros(n_cores + 1, dtype=np.int64), np.empty(n_cores, dtype=np.bool_)
     found_left, keys_left = np.empty(total, dtype=np.int64), np.empty(total)
     marks_left, growth_left = np.empty(total, dtype=np.int8), np.empty((n_cores, growth.shape[1]))
     n_cores, total = 0, 0
@@ -484,10 +494,11 @@ def still_open(first, cores, offsets, found, keys, marks, growth, dirty, alive):
         for t in range(offsets[c], offsets[c + 1]):
             if alive[found[t]]:
                 found_left[total], keys_left[total], marks_left[total] = found[t], keys[t], marks[t]
+                known_left[n_cores] += t < offsets[c] + known[c]
                 total += 1
         cores_left[n_cores], dirty_left[n_cores] = cores[c], dirty[c]
         for p in range(growth.shape[1]):
             growth_left[n_cores, p] = growth[c, p]
         n_cores += 1
         offsets_left[n_cores] = total
-    return cores_left, offsets_left, found_left, keys_left, marks_left, growth_left, dirty_left
+    return cores_left, offsets_left, found_left, keys_left, marks_left, known_left, dirty_left, growth_left
