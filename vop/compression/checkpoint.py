@@ -2,21 +2,22 @@
 
 from __future__ import annotations
 
-import json
 import os
 import time
 from collections.abc import Mapping
 from pathlib import Path
 
-import h5py
 import numpy as np
 
 from vop.errors import InputError
 from vop.metadata import digest
-from vop.storage import atomic_path, open_hdf5
+from vop.storage import create_hdf5, open_hdf5
 
 FORMAT = "vop-compression-checkpoint"
 FORMAT_VERSION = 1
+
+#: Seconds of work that a killed run may lose.
+SECONDS = 60.0
 
 
 class Checkpoint:
@@ -25,25 +26,19 @@ class Checkpoint:
     The time of saving depends on the clock, the result of the run must not.
     """
 
-    def __init__(
-        self,
-        path: str | os.PathLike[str] | None = None,
-        key: str = "",
-        seconds: float = 60.0,
-    ) -> None:
-        """``key`` tells apart runs that must not be mixed; ``seconds`` between two savings."""
+    def __init__(self, path: str | os.PathLike[str] | None = None, key: str = "") -> None:
+        """``key`` tells apart runs that must not be mixed."""
         self._path = None if path is None else Path(path)
         self._key = key
-        self._seconds = seconds
         self._last = time.monotonic()
 
     def for_bound(self, bound: float) -> Checkpoint:
         """The same place for a run at another bound."""
-        return Checkpoint(self._path, digest(self._key, repr(bound)), self._seconds)
+        return Checkpoint(self._path, digest(self._key, repr(bound)))
 
     def due(self) -> bool:
         """Whether it is time to save."""
-        return self._path is not None and time.monotonic() - self._last >= self._seconds
+        return self._path is not None and time.monotonic() - self._last >= SECONDS
 
     def save(self, state: Mapping[str, np.ndarray]) -> None:
         """Replace the state on disk, whole or not at all.
@@ -55,48 +50,36 @@ class Checkpoint:
         """
         if self._path is None:
             return
-        with atomic_path(self._path, force=True) as temporary, h5py.File(temporary, "w") as handle:
+        with create_hdf5(self._path, force=True) as handle:
             handle.attrs["format"] = FORMAT
             handle.attrs["format_version"] = FORMAT_VERSION
             handle.attrs["key"] = self._key
-            handle.attrs["digest"] = _digest(state)
             for name, values in state.items():
                 handle.create_dataset(name, data=values)
         self._last = time.monotonic()
 
     def load(self) -> dict[str, np.ndarray] | None:
-        """The state of an earlier run of the same key, or None where there is none.
+        """The state of an earlier run of the same key; None if there is none, or one of another key.
 
         Raises
         ------
         InputError
-            Where the file is damaged, or is no checkpoint (it would be overwritten).
+            Where the file is damaged, or is no checkpoint: it would be overwritten.
         """
         if self._path is None or not self._path.exists():
             return None
-        with open_hdf5(self._path) as handle:
-            if handle.attrs.get("format") != FORMAT or handle.attrs.get("format_version") != FORMAT_VERSION:
+        with open_hdf5(self._path, sealed=True) as handle:
+            attributes = handle.attrs
+            if (attributes.get("format"), attributes.get("format_version")) != (FORMAT, FORMAT_VERSION):
                 raise InputError(
-                    f"{self._path} is not a compression checkpoint of version {FORMAT_VERSION}; "
+                    f"{self._path} is no compression checkpoint of version {FORMAT_VERSION}; "
                     "remove it or name another file"
                 )
-            if handle.attrs.get("key") != self._key:
+            if attributes.get("key") != self._key:
                 return None
-            state = {name: handle[name][()] for name in handle}
-            wanted = handle.attrs.get("digest")
-        if _digest(state) != wanted:
-            raise InputError(f"{self._path}: the checkpoint is damaged; remove it and start again")
-        return state
+            return {name: handle[name][()] for name in handle}
 
     def remove(self) -> None:
         """Delete the file once the run it belongs to has succeeded."""
         if self._path is not None:
             self._path.unlink(missing_ok=True)
-
-
-def _digest(state: Mapping[str, np.ndarray]) -> str:
-    parts: list[bytes | str | memoryview] = []
-    for name in sorted(state):
-        values = np.ascontiguousarray(state[name])
-        parts += [json.dumps([name, values.dtype.str, values.shape]), values.tobytes()]
-    return digest(*parts)

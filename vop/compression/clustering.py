@@ -72,12 +72,12 @@ class _Clustering:
     def run(self) -> CompressionResult:
         order = self._order()
         self.screen = Screen(self.packed, self.n, self.problem.bound, order)
+        cores, delivered = self._resumed()
+        count = sum(map(len, cores))
         current = self._fresh(np.zeros(0, np.int64))
-        at, at_once, left = 0, 1, self.n_rows
-        cores: list[np.ndarray] = []
-        delivered: list[np.ndarray] = []
-        count = 0
+        at, at_once, left = 0, 1, int(np.count_nonzero(self.alive))
         while left:
+            self.screen.refresh(self.alive, left)
             fresh, at = kernels.next_alive(order, at, self.alive, at_once - len(current.cores))
             current = self._grown(current, fresh)
             first, closed = kernels.commit(
@@ -89,13 +89,26 @@ class _Clustering:
             if self.problem.limit is not None and count > self.problem.limit:
                 raise TooManyVops
             left = int(np.count_nonzero(self.alive))
+            if self.problem.checkpoint.due():
+                self._save(cores, delivered)
             self.progress("clustering", self.n_rows - left, self.n_rows)
             most = min(_MOST_AT_ONCE, _MOST_CANDIDATES * len(current.cores) // max(1, len(current.found)))
             at_once = min(max(2 * self.threads, min(most, 2 * first)), _MOST_AT_ONCE)
             current = _Open(*kernels.still_open(first, *current, self.alive))
-            if left:
-                self.screen.refresh(self.alive, left)
-        return CompressionResult(np.concatenate(delivered), np.concatenate(cores), {})
+        return CompressionResult(np.concatenate(delivered), np.concatenate(cores), {"patience": _PATIENCE})
+
+    def _resumed(self) -> tuple[list[np.ndarray], list[np.ndarray]]:
+        """Cores and delivered matrices of the clusters that an earlier run closed."""
+        state = self.problem.checkpoint.load()
+        if state is None:
+            return [], []
+        self.alive = state["alive"]
+        return [state["cores"]], [state["delivered"]]
+
+    def _save(self, cores: list[np.ndarray], delivered: list[np.ndarray]) -> None:
+        self.problem.checkpoint.save(
+            {"alive": self.alive, "cores": np.concatenate(cores), "delivered": np.concatenate(delivered)}
+        )
 
     def _order(self) -> np.ndarray:
         """Rows by descending λmax, ties by row."""
@@ -131,7 +144,7 @@ class _Clustering:
         kernels.grow(*part, chosen, self.packed, self.n, problem.bound, tolerance, _PATIENCE)
 
     def _grown(self, current: _Open, fresh: np.ndarray) -> _Open:
-        """``current``, where an earlier cluster took a candidate grown again, and clusters around ``fresh``."""
+        """``current``, grown again where an earlier cluster took a candidate, and clusters at ``fresh``."""
         n_parts = 2 * self.threads
         again = np.flatnonzero(current.dirty)
         tasks = [self.pool.submit(self._grow, current, p) for p in np.array_split(again, n_parts) if len(p)]
