@@ -405,9 +405,12 @@ def _gershgorin(_typing, h, diagonal, stride, squares, n, x, small):
 
 @intrinsic
 def _laguerre(_typing, h, diagonal, stride, squares, n, x, small):
-    """One step of :func:`vop.kernels.cholesky.smallest_root` for all lanes; whether any lane goes on.
+    """One step of Laguerre's iteration from ``x`` towards the least eigenvalue; whether any lane goes on.
 
-    A lane that is done has ``small`` set to infinity and moves no more.
+    From the left of all roots it climbs monotonically to the least (Wilkinson, The Algebraic Eigenvalue
+    Problem, 1965, ch. 7). The derivatives come from the ratios q_i of leading minors, which are positive
+    there: a ratio that is not says that rounding has carried x past the root, which is then reached. A
+    lane that is done has ``small`` set to infinity and moves no more.
     """
 
     def generate(context, builder, signature, args):
@@ -450,7 +453,8 @@ def least_eigenvalues(h, n, out):
     """λmin of each matrix of a lane buffer into ``out`` (LANES,); ``h`` is overwritten.
 
     Householder reduction to tridiagonal form (Golub & Van Loan, Matrix Computations, 4th ed., §8.3),
-    then Laguerre's iteration as in :func:`vop.kernels.cholesky.smallest_root`.
+    then Laguerre's iteration from below. Correct to rounding; where many eigenvalues crowd at the low
+    end, the iteration may stop early, 10⁻¹² of the norm too low at most as far as seen.
     """
     wide = 2 * LANES
     s = wide * n * n
