@@ -234,3 +234,31 @@ def test_matrices_of_the_file_are_those_in_memory(tmp_path: object) -> None:
 def test_an_unknown_combination_is_refused(combine: str) -> None:
     with pytest.raises(InputError, match="outer, field"):
         vop.build_sar_model(ArraySource(*_lumpy(1)), combine=combine)
+
+
+def test_turning_the_body_by_a_quarter_turns_the_matrices_with_it() -> None:
+    # Symmetry: (x, y) → (−y, x); rows are compared voxel by voxel, faces by where they went.
+    grid, tissue, e = _lumpy(3)
+    turned_grid = RectilinearGrid(-grid.y_edges_m[::-1], grid.x_edges_m, grid.z_edges_m)
+
+    def turn(a: np.ndarray) -> np.ndarray:  # new[k, j', i'] with j' = i and i' = ny − 1 − j
+        return np.swapaxes(a, -1, -2)[..., ::-1]
+
+    turned_e = np.stack([-turn(e[:, 1]), turn(e[:, 0]), turn(e[:, 2])], axis=1)
+    turned_tissue = Tissue(turn(tissue.conductivity_s_m), turn(tissue.density_kg_m3))
+    one = vop.build_sar_model(ArraySource(grid, tissue, e), average_mass=0.0008)
+    two = vop.build_sar_model(ArraySource(turned_grid, turned_tissue, turned_e), average_mass=0.0008)
+    assert one.cubes is not None
+    assert two.cubes is not None
+    faces = {2: 4, 3: 5, 4: 3, 5: 2}
+    k, j, i = np.unravel_index(one.cubes.voxel, grid.shape)
+    moved = np.ravel_multi_index((k, i, grid.shape[1] - 1 - j), turned_grid.shape)
+    wanted = {(int(v), faces.get(int(c), int(c))): r for r, (v, c) in
+              enumerate(zip(moved, one.cubes.kind, strict=True))}  # fmt: skip
+    found = {(int(v), int(c)): r for r, (v, c) in
+             enumerate(zip(two.cubes.voxel, two.cubes.kind, strict=True))}  # fmt: skip
+    assert found.keys() == wanted.keys()
+    assert any(key[1] > 1 for key in found), "no face-anchored cube: the test would show little"
+    pairs = np.array([(wanted[key], found[key]) for key in wanted])
+    scale = np.abs(one.packed).max(axis=1)[pairs[:, 0], None]
+    assert (np.abs(one.packed[pairs[:, 0]] - two.packed[pairs[:, 1]]) <= 4e-7 * scale).all()
