@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from concurrent.futures import ThreadPoolExecutor
+
 import numpy as np
 import pytest
 from conftest import random_matrices
@@ -135,7 +137,7 @@ def test_screens_find_exactly_the_matrices_whose_least_eigenvalue_below_a_core_i
     largest = np.linalg.eigvalsh(q)[:, -1]
     order = np.argsort(-largest, kind="stable")
     bound = part * largest.max()
-    screen = Screen(packed, n, bound, order)
+    screen = Screen(packed, n, bound, order, ThreadPoolExecutor(2))
     alive = np.random.default_rng(0).random(len(q)) < 0.6
     for fewer in (False, True):
         if fewer:
@@ -159,7 +161,8 @@ def test_screens_find_exactly_the_matrices_whose_least_eigenvalue_below_a_core_i
 def test_tables_keep_every_row_once_and_blocks_hold_their_minima() -> None:
     rng = np.random.default_rng(3)
     table = rng.normal(size=(1003, 5)).astype(np.float32)
-    order = kernels.order_by_halving(table, LANES)
+    order = np.arange(1003)
+    kernels.order_by_halving(table, order, 0, 1003, LANES)
     np.testing.assert_array_equal(np.sort(order), np.arange(1003))
     blocks = np.empty((63, 5 * LANES), np.float32)
     kernels.into_blocks(table, order, 0, 1003, blocks)

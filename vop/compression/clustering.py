@@ -71,7 +71,7 @@ class _Clustering:
 
     def run(self) -> CompressionResult:
         order = self._order()
-        self.screen = Screen(self.packed, self.n, self.problem.bound, order)
+        self.screen = Screen(self.packed, self.n, self.problem.bound, order, self.pool)
         cores, delivered = self._resumed()
         count = sum(map(len, cores))
         current = self._fresh(np.zeros(0, np.int64))
@@ -93,7 +93,7 @@ class _Clustering:
                 self._save(cores, delivered)
             self.progress("clustering", self.n_rows - left, self.n_rows)
             most = min(_MOST_AT_ONCE, _MOST_CANDIDATES * len(current.cores) // max(1, len(current.found)))
-            at_once = min(max(2 * self.threads, min(most, 2 * first)), _MOST_AT_ONCE)
+            at_once = min(max(2 * self.threads, min(most, first + first // 4 + 1)), _MOST_AT_ONCE)
             current = _Open(*kernels.still_open(first, *current, self.alive))
         return CompressionResult(np.concatenate(delivered), np.concatenate(cores), {"patience": _PATIENCE})
 
@@ -145,10 +145,12 @@ class _Clustering:
 
     def _grown(self, current: _Open, fresh: np.ndarray) -> _Open:
         """``current``, grown again where an earlier cluster took a candidate, and clusters at ``fresh``."""
-        n_parts = 2 * self.threads
         again = np.flatnonzero(current.dirty)
-        tasks = [self.pool.submit(self._grow, current, p) for p in np.array_split(again, n_parts) if len(p)]
-        new = [self.pool.submit(self._fresh, p) for p in np.array_split(fresh, n_parts) if len(p)]
-        for task in tasks:
-            task.result()
-        return _joined([current, *(task.result() for task in new)])
+
+        def work(share: int) -> _Open:
+            self._grow(current, again[share :: self.threads])
+            first, last = (len(fresh) * k // self.threads for k in (share, share + 1))
+            return self._fresh(fresh[first:last])
+
+        others = [self.pool.submit(work, share) for share in range(1, self.threads)]
+        return _joined([current, work(0), *(other.result() for other in others)])

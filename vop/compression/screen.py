@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from concurrent.futures import ThreadPoolExecutor
+
 import numpy as np
 
 from vop.hermitian import U32, channels_from_width, identity, inner_weights, pack_excitations
@@ -26,24 +28,31 @@ class Screen:
     excitations, and their minima over blocks of like matrices.
     """
 
-    def __init__(self, packed: np.ndarray, n: int, bound: float, order: np.ndarray) -> None:
-        """``order``: rows by descending λmax; the pool is chosen from a sample along it."""
-        self.packed, self.n, self.bound = packed, n, bound
+    def __init__(
+        self, packed: np.ndarray, n: int, bound: float, order: np.ndarray, pool: ThreadPoolExecutor
+    ) -> None:
+        """``order``: rows by descending λmax; excitations are chosen from a sample along it."""
+        self.packed, self.n, self.bound, self.pool = packed, n, bound, pool
         self.positions, self.one = lane_positions(n), identity(n)
         sample = packed[order[_evenly(len(order), _SAMPLE)]].astype(np.float64)
         count = max(1, min(_POOL, _POOL_BYTES // (8 * len(packed))))
-        self.functionals = pack_excitations(_pool(sample, bound, count)).astype(np.float32)
+        self.functionals = pack_excitations(_excitations(sample, bound, count, pool)).astype(np.float32)
         self.usual = (sample @ self.functionals.T.astype(np.float64)).mean(axis=0).astype(np.float32)
         self.usual += np.finfo(np.float32).tiny
         # n² + 3 roundings, each of at most 2⁻²⁴ of Σ|f||q| ≤ √2·‖Q‖_F ≤ √(2n)·λmax, on either side.
         norm = np.sqrt((np.square(sample[0]) @ inner_weights(n)).max())
         self.margin = 2.0 * (n * n + 3) * U32 * np.sqrt(2 * n) * norm
         table = packed @ self.functionals.T
-        self.rows = kernels.order_by_halving(table, LANES)
-        self.n_rows = len(self.rows)
+        self.n_rows = len(packed)
+        self.rows = np.arange(self.n_rows)
+        segments = [(0, self.n_rows)]
+        while len(segments) < 16 and self.n_rows > 1 << 12:
+            middles = [kernels.halve(table, self.rows, a, b, LANES) for a, b in segments]
+            segments = [s for (a, b), m in zip(segments, middles, strict=True) for s in ((a, m), (m, b))]
+        list(pool.map(lambda s: kernels.order_by_halving(table, self.rows, *s, LANES), segments))
         n_blocks = -(-self.n_rows // LANES)
         self.blocks = np.empty((n_blocks, table.shape[1] * LANES), np.float32)
-        kernels.into_blocks(table, self.rows, 0, self.n_rows, self.blocks)
+        list(pool.map(lambda s: kernels.into_blocks(table, self.rows, *s, self.blocks), segments))
         self.rows = np.concatenate([self.rows, np.full(n_blocks * LANES - self.n_rows, -1, np.int64)])
         self._minima()
 
@@ -84,23 +93,28 @@ def _evenly(total: int, count: int) -> np.ndarray:
     return np.unique(np.linspace(0, total - 1, min(total, count)).astype(np.int64))
 
 
-def _eigenvectors(packed: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+def _eigenvectors(packed: np.ndarray, pool: ThreadPoolExecutor) -> tuple[np.ndarray, np.ndarray]:
     """Ascending eigenvalues (R, n) of packed float64 rows, and eigenvectors (R, n, n) in rows."""
     n = channels_from_width(packed.shape[1])
-    vectors = np.empty((len(packed), n, n), np.complex128)
-    values = kernels.leading_eigenvectors(packed, n, vectors)
+    vectors, values = np.empty((len(packed), n, n), np.complex128), np.empty((len(packed), n))
+    starts = range(0, len(packed), 256)
+    list(
+        pool.map(
+            lambda a: kernels.eigenvectors(packed, n, a, min(a + 256, len(packed)), values, vectors), starts
+        )
+    )
     order = np.argsort(values, axis=1, kind="stable")
     return np.take_along_axis(values, order, 1), np.take_along_axis(vectors, order[:, :, None], 1)
 
 
-def _pool(sample: np.ndarray, bound: float, count: int) -> np.ndarray:
+def _excitations(sample: np.ndarray, bound: float, count: int, pool: ThreadPoolExecutor) -> np.ndarray:
     """``count`` excitations, (count, n), that tell apart most pairs of ``sample`` that are not near.
 
     sample : (S, n²), by descending λmax. A pair (B, Q) is told apart by w if wᴴ(Q − B)w > bound. Pairs
     that eigenvectors of single matrices do not tell apart offer the leading eigenvector of Q − B; the
     choice among those is greedy.
     """
-    spread = _spread(_eigenvectors(sample)[1], min(count, _SPREAD))
+    spread = _spread(_eigenvectors(sample, pool)[1], min(count, _SPREAD))
     values = sample @ pack_excitations(spread).T
     first, second = [np.zeros(0, np.int64)], [np.zeros(0, np.int64)]
     for core in _evenly(len(sample), _CORES):
@@ -110,7 +124,7 @@ def _pool(sample: np.ndarray, bound: float, count: int) -> np.ndarray:
             first.append(np.full(len(near), core))
             second.append(near)
     differences = sample[np.concatenate(second)] - sample[np.concatenate(first)]
-    largest, vectors = _eigenvectors(differences)
+    largest, vectors = _eigenvectors(differences, pool)
     hard = np.flatnonzero(largest[:, -1] > bound)
     if not len(hard) or count <= len(spread):
         return spread

@@ -43,34 +43,37 @@ def largest_eigenvalues(packed, n, positions, first, last, out):
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def order_by_halving(table, block):
-    """A permutation of the rows of ``table`` (N, M) float32 that puts like rows together.
+def halve(table, order, first, last, block):
+    """Reorder order[first … last − 1] so that one half is below the median of the widest column.
 
-    Segments are halved at the median of the column of widest spread until they hold at most ``block``
-    rows; lengths of all but the last are multiples of ``block``.
+    table : (N, M) float32, whose rows ``order`` (N,) int64 names. Returns the place of the second half,
+    a multiple of ``block`` after ``first``.
     """
-    n_rows, width = table.shape
-    order = np.arange(n_rows)
-    stack = [(0, n_rows)]
+    count = last - first
+    step = max(1, count // 24)
+    best, column = -1.0, 0
+    for m in range(table.shape[1]):
+        low, high = np.inf, -np.inf
+        for q in range(first, last, step):
+            value = table[order[q], m]
+            low, high = min(low, value), max(high, value)
+        if high - low > best:
+            best, column = high - low, m
+    middle = first + (((count + block - 1) // block + 1) // 2) * block
+    _select(table, order, column, first, last - 1, middle)
+    return middle
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def order_by_halving(table, order, first, last, block):
+    """Halve order[first … last − 1] until segments hold at most ``block`` rows: like rows together."""
+    stack = [(first, last)]
     while len(stack) > 0:
-        first, last = stack.pop()
-        count = last - first
-        if count <= block:
-            continue
-        step = max(1, count // 24)
-        best, column = -1.0, 0
-        for m in range(width):
-            low, high = np.inf, -np.inf
-            for q in range(first, last, step):
-                value = table[order[q], m]
-                low, high = min(low, value), max(high, value)
-            if high - low > best:
-                best, column = high - low, m
-        middle = first + (((count + block - 1) // block + 1) // 2) * block
-        _select(table, order, column, first, last - 1, middle)
-        stack.append((first, middle))
-        stack.append((middle, last))
-    return order
+        low, high = stack.pop()
+        if high - low > block:
+            middle = halve(table, order, low, high, block)
+            stack.append((low, middle))
+            stack.append((middle, high))
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -142,9 +145,10 @@ def minima_of_blocks(blocks, out):
 
 
 @njit(cache=True, nogil=True, error_model="numpy", inline="always")
-def _lanes_below(block, turn, limits):
+def _lanes_below(block, turn, depth, limits):
     mask = _ALL
-    for m in turn:
+    for place in range(depth):
+        m = turn[place]
         mask &= lanes_at_most(block, m * LANES, limits[m])
         if mask == 0:
             break
@@ -179,8 +183,11 @@ def candidates_of(
     first_wait, second_wait = np.empty(LANES, dtype=np.int64), np.empty(2 * LANES, dtype=np.int64)
     least, core = np.empty(LANES), np.empty(n * n)
     raised = np.empty(n * n, dtype=np.float32)
-    limits = np.empty(usual.shape[0], dtype=np.float32)
-    turn = np.empty(usual.shape[0], dtype=np.int64)
+    width = usual.shape[0]
+    # Rows of a block that is near as a whole mostly pass; the elimination of small ones costs no more.
+    depth = min(width, max(4, n * n // 8))
+    limits = np.empty(width, dtype=np.float32)
+    turn = np.empty(width, dtype=np.int64)
     offsets = np.zeros(cores.shape[0] + 1, dtype=np.int64)
     found, keys = np.empty(1024, dtype=np.int64), np.empty(1024)
     total = 0
@@ -194,12 +201,12 @@ def candidates_of(
         shift *= (4 * n + 16) * 2.0**-24
         for p in range(n * n):
             raised[p] = core[p] + (bound + shift) * one[p]
-        for m in range(usual.shape[0]):
+        for m in range(width):
             value = bound + margin
             for p in range(n * n):
                 value += functionals[m, p] * core[p]
             limits[m] = value
-        for m in range(usual.shape[0]):
+        for m in range(width):
             at = m
             while at > 0 and limits[turn[at - 1]] * usual[m] > limits[m] * usual[turn[at - 1]]:
                 turn[at] = turn[at - 1]
@@ -209,12 +216,12 @@ def candidates_of(
         n_first, n_second = 0, 0
         for u in range(upper.shape[0] + 1):
             at_end = u == upper.shape[0]
-            mask = 0 if at_end else _lanes_below(upper[u], turn, limits)
+            mask = 0 if at_end else _lanes_below(upper[u], turn, width, limits)
             for q in range(LANES):
                 inner = 0
                 b = u * LANES + q
                 if (mask >> q) & 1:
-                    inner = _lanes_below(blocks[b], turn, limits)
+                    inner = _lanes_below(blocks[b], turn, depth, limits)
                 elif not (at_end and q == 0):
                     continue
                 for lane in range(LANES):
@@ -393,18 +400,16 @@ def _at_most(z, bound, n, h):
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def leading_eigenvectors(packed, n, out):
-    """Eigenvalues (R, n) of packed float64 rows, and eigenvectors in the rows of out (R, n, n); unsorted."""
+def eigenvectors(packed, n, first, last, values, vectors):
+    """Of rows first … last − 1 of ``packed`` (R, n²) float64: values (R, n), vectors in rows of (R, n, n)."""
     h = np.empty((n, n), dtype=np.complex128)
     e = np.empty(n, dtype=np.complex128)
     f, tau, z = np.empty(n), np.empty(n), np.empty((n, n))
-    values = np.empty((packed.shape[0], n))
-    for r in range(packed.shape[0]):
+    for r in range(first, last):
         unpack_row(packed[r], n, h)
         eigensystem(h, n, values[r], e, f, tau, z)
         for k in range(n):
-            back_transform(h, n, e, tau, z[k], out[r, k])
-    return values
+            back_transform(h, n, e, tau, z[k], vectors[r, k])
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
