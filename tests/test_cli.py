@@ -187,3 +187,28 @@ def test_help_is_quick_because_nothing_heavy_is_imported(tmp_path: Path) -> None
     )
     done = subprocess.run([sys.executable, "-c", code], cwd=tmp_path, capture_output=True, text=True)
     assert done.stdout.strip().endswith("[]"), done.stdout
+
+
+def test_regions_limits_and_the_exposed_part_go_through_a_job(job_folder: Path) -> None:
+    (job_folder / "regions.toml").write_text(
+        'default = "trunk"\n[[rule]]\nregion = "extremity"\ntissues = ["fat"]\n'
+    )
+    exposed = np.zeros((12, 11, 10), bool)
+    exposed[:6] = True
+    np.save(job_folder / "exposed.npy", exposed)
+    (job_folder / "JOB.toml").write_text(
+        JOB + '[regions]\nfile = "regions.toml"\nexposed = "exposed.npy"\n[limits]\ntable = "limits.toml"\n'
+    )
+    (job_folder / "limits.toml").write_text(
+        'mode = "bench"\nsource = "invented for this test"\nlocal_mass_kg = 1e-4\n'
+        "[local]\nhead = 1.0\ntrunk = 10.0\nextremity = 20.0\n"
+    )
+    done = run_vop("run", "JOB.toml", cwd=job_folder)
+    assert done.returncode == 0, done.stderr
+    assert "fractions of the local limits of mode 'bench'" in done.stdout
+    model = vop.SarModel.load(job_folder / "result" / "model.h5")
+    vop_set = vop.VopSet.load(job_folder / "result" / "set.h5")
+    assert {"partial body", "extremity", "trunk", "whole body", "absorbed power"} <= set(
+        model.global_matrices
+    )
+    assert vop_set.global_matrices.keys() == model.global_matrices.keys()

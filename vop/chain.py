@@ -27,7 +27,7 @@ from vop.metadata import Metadata, digest
 from vop.plugins import EXPORTERS, find, open_fields
 from vop.progress import Progress, silent
 from vop.proof import prove, recheck
-from vop.regions import load_regions
+from vop.regions import load_exposed, load_regions
 from vop.sarmodel import SarModel
 from vop.storage import PARTIAL, file_digest, write_text
 from vop.summary import job_summary
@@ -117,6 +117,7 @@ class _Chain:
         source = open_fields(job.input_path, job.reader, **job.reader_options)
         regions = load_regions(job.regions_file, source.grid, source.tissue) if job.regions_file else None
         limits = load_limits(job.limits_table) if job.limits_table else None
+        exposed = load_exposed(job.exposed_file, source.grid) if job.exposed_file else None
         key = digest(
             __version__,
             json.dumps(
@@ -130,6 +131,7 @@ class _Chain:
                     job.passivity_waiver,
                     job.patient_mass_kg,
                     None if limits is None else limits.record(),
+                    None if exposed is None else digest(exposed.tobytes()),
                     None if regions is None else digest(regions.code.tobytes(), regions.excluded.tobytes()),
                 ],
                 sort_keys=True,
@@ -160,6 +162,7 @@ class _Chain:
                 source,
                 job.average_mass_kg,
                 regions=regions,
+                exposed=exposed,
                 patient_mass_kg=job.patient_mass_kg,
                 limits=limits,
                 annotate=annotate,

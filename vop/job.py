@@ -37,7 +37,7 @@ _SCHEMA: dict[str, dict[str, type | tuple[type, ...]]] = {
         "expiry": str,
     },
     "model": {"average_mass_kg": (int, float), "rule": str, "combine": str},
-    "regions": {"file": str, "patient_mass_kg": (int, float)},
+    "regions": {"file": str, "patient_mass_kg": (int, float), "exposed": str},
     "limits": {"table": str},
     "compress": {"overestimation": (int, float), "method": str},
     "export": {"formats": list},
@@ -64,6 +64,7 @@ class Job:
     model_options: Mapping[str, Any]
     regions_file: Path | None
     patient_mass_kg: float | None
+    exposed_file: Path | None
     limits_table: str | Path | None
     overestimation: float
     method: str
@@ -135,6 +136,7 @@ def load_job(path: str | os.PathLike[str]) -> Job:
         model_options={k: v for k, v in section["model"].items() if k != "average_mass_kg"},
         regions_file=base / section["regions"]["file"] if "file" in section["regions"] else None,
         patient_mass_kg=section["regions"].get("patient_mass_kg"),
+        exposed_file=base / section["regions"]["exposed"] if "exposed" in section["regions"] else None,
         limits_table=_table(section["limits"].get("table"), base),
         overestimation=float(section["compress"].get("overestimation", 0.05)),
         method=section["compress"].get("method", "clustering"),

@@ -159,6 +159,17 @@ def load_regions(path: str | os.PathLike[str], grid: RectilinearGrid, tissue: Ti
     return regions
 
 
+def load_exposed(path: str | os.PathLike[str], grid: RectilinearGrid) -> np.ndarray:
+    """The exposed part of the body, (nz, ny, nx) bool, from an NPY file of bools or integers (z, y, x).
+
+    Raises
+    ------
+    InputError
+        Where the file is missing, no such array, or of another shape than the grid.
+    """
+    return _mask(str(path), Path(path), grid.shape)
+
+
 def _selected(
     where: str, rule: Any, grid: RectilinearGrid, tissue: Tissue, folder: Path
 ) -> tuple[str, np.ndarray]:
