@@ -49,10 +49,10 @@ class Screen:
         while len(segments) < 16 and self.n_rows > 1 << 12:
             middles = [kernels.halve(table, self.rows, a, b, LANES) for a, b in segments]
             segments = [s for (a, b), m in zip(segments, middles, strict=True) for s in ((a, m), (m, b))]
-        list(pool.map(lambda s: kernels.order_by_halving(table, self.rows, *s, LANES), segments))
+        list(pool.map(lambda s: kernels.order_by_halving(table, self.rows, s[0], s[1], LANES), segments))
         n_blocks = -(-self.n_rows // LANES)
         self.blocks = np.empty((n_blocks, table.shape[1] * LANES), np.float32)
-        list(pool.map(lambda s: kernels.into_blocks(table, self.rows, *s, self.blocks), segments))
+        list(pool.map(lambda s: kernels.into_blocks(table, self.rows, s[0], s[1], self.blocks), segments))
         self.rows = np.concatenate([self.rows, np.full(n_blocks * LANES - self.n_rows, -1, np.int64)])
         self._minima()
 
