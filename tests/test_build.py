@@ -178,12 +178,11 @@ def test_a_used_voxel_takes_the_largest_of_the_valid_cubes_that_hold_it() -> Non
 
 
 def test_tiles_do_not_change_the_matrices(monkeypatch: pytest.MonkeyPatch) -> None:
-    from vop import build
+    from vop.averaging import tiles
 
     source = ArraySource(*_lumpy(9))
     whole = vop.build_sar_model(source, average_mass=0.0008)
-    monkeypatch.setattr(build, "_LARGEST_TILE", 5)
-    monkeypatch.setattr(build, "_SMALLEST_TILE", 4)
+    monkeypatch.setattr(tiles, "RESULT_BYTES", 1 << 18)
     parts = vop.build_sar_model(source, average_mass=0.0008)
     assert whole.cubes is not None
     assert parts.cubes is not None

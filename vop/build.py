@@ -2,23 +2,22 @@
 
 from __future__ import annotations
 
-import itertools
 import os
 from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import replace
 
 import numpy as np
-from numba import get_num_threads
 
+from vop.averaging.apply import average_tile, tiles_for
 from vop.averaging.geometry import STANDARD, find_cubes
-from vop.averaging.samples import COMBINATIONS, read_samples
+from vop.averaging.samples import COMBINATIONS
+from vop.averaging.scratch import Scratch
+from vop.averaging.tiles import Tile
 from vop.checks import checked_metadata
 from vop.cubes import CubeGeometry
 from vop.errors import InputError
 from vop.fields import FieldSource
-from vop.grid import Box, RectilinearGrid
-from vop.hermitian import packed_entries, round_outward, unpack
-from vop.kernels.averaging import LANES, average_entries, signed_corners
+from vop.hermitian import round_outward, unpack
 from vop.limits import LimitTable, as_fraction_of_limit
 from vop.metadata import Domain, Metadata, Reference
 from vop.progress import Progress, silent
@@ -26,9 +25,8 @@ from vop.regions import Regions, global_matrices_by_region
 from vop.sarmodel import SarModel, create_rows, write_model
 from vop.storage import create_hdf5, refuse_existing
 
-#: Memory for the fields of a tile, for its tables and for its results, each; sets the size of tiles.
-_BYTES = 256 << 20
-_LARGEST_TILE, _SMALLEST_TILE = 96, 8
+#: Matrix entries that are rounded at a time; only memory depends on it.
+_ROUNDED = 1 << 22
 
 
 def build_sar_model(
@@ -81,7 +79,7 @@ def build_sar_model(
     if path is not None:
         refuse_existing(path, force)
     cubes = find_cubes(source.grid, source.tissue, average_mass, rule, progress)
-    tiles = _tiles(source, cubes)
+    tiles = tiles_for(source, cubes, combine)
     cubes = cubes.take(np.concatenate([t.rows for t in tiles]))
     shape = (len(cubes), source.n_channels**2)
 
@@ -121,133 +119,35 @@ def build_sar_model(
 def absorbed_power(source: FieldSource, combine: str = "outer", progress: Progress = silent) -> np.ndarray:
     """∫ σ/2 conj(E_i) E_j dV over the body: (n, n) complex128, W per |w|²."""
     none = find_cubes(source.grid, source.tissue, None).take(np.zeros(0, np.int64))
-    tiles = _tiles(source, none)
+    tiles = tiles_for(source, none, combine)
     return unpack(_fill(np.empty((0, source.n_channels**2)), source, tiles, none, combine, progress))
 
 
 def _fill(
     rows: np.ndarray,
     source: FieldSource,
-    tiles: list[_Tile],
+    tiles: list[Tile],
     cubes: CubeGeometry,
     combine: str,
     progress: Progress,
 ) -> np.ndarray:
     """Write the matrices tile by tile into ``rows``; returns the packed absorbed power of the body."""
     absorbed = np.zeros(source.n_channels**2)
-    at = 0
+    scratch, at = Scratch(), 0
+    step = _ROUNDED // rows.shape[1] + 1
     for done, tile in enumerate(tiles):
         count = len(tile.rows)
-        here = _tile_matrices(source, tile, cubes.take(np.arange(at, at + count)), combine)
-        absorbed += here[-1]
-        if count:
-            rows[at : at + count] = round_outward(here[:-1])
+        mine = cubes.take(np.arange(at, at + count))
+        averages, power, lanes = average_tile(source, tile, mine, combine, scratch)
+        absorbed += power[lanes]
+        for a in range(0, count, step):
+            part = averages[a : a + step]
+            packed = scratch.array("packed", (len(part), len(lanes)))
+            np.take(part, lanes, axis=1, out=packed, mode="clip")
+            rows[at + a : at + a + len(part)] = round_outward(packed)
         at += count
         progress("local matrices", done + 1, len(tiles))
     return absorbed
-
-
-@dataclass(frozen=True, eq=False)
-class _Tile:
-    core: Box
-    around: Box
-    rows: np.ndarray
-
-
-def _cores(grid: RectilinearGrid, size: int) -> list[Box]:
-    z, y, x = ([slice(a, min(a + size, s)) for a in range(0, s, size)] for s in grid.shape)
-    return list(itertools.product(z, y, x))
-
-
-def _tile_size(source: FieldSource, cubes: CubeGeometry) -> int:
-    """Cells along the core of a tile: as large as the memory for fields, tables and results allows."""
-    n = source.n_channels
-    steps = min(float(np.diff(e).min()) for e in source.grid.edges_m)
-    reach = float((cubes.box_m[:, 1] - cubes.box_m[:, 0]).max(initial=0.0))
-    halo = int(np.ceil(reach / steps))
-    for size in range(_LARGEST_TILE, _SMALLEST_TILE, -4):
-        fields = (size + halo) ** 3 * 24 * n
-        tables = (size + halo) ** 3 * 8 * LANES
-        if max(fields, tables, size**3 * 8 * n**2) <= _BYTES:
-            return size
-    return _SMALLEST_TILE
-
-
-def _tiles(source: FieldSource, cubes: CubeGeometry) -> list[_Tile]:
-    grid, size = source.grid, _tile_size(source, cubes)
-    counts = [-(-s // size) for s in grid.shape]
-    k, j, i = np.unravel_index(cubes.voxel, grid.shape)
-    tile_of = (k // size * counts[1] + j // size) * counts[2] + i // size
-    order = np.argsort(tile_of, kind="stable")
-    ends = np.searchsorted(tile_of[order], np.arange(np.prod(counts) + 1))
-    tiles = []
-    for number, core in enumerate(_cores(grid, size)):
-        rows = order[ends[number] : ends[number + 1]]
-        if rows.size == 0 and not source.tissue.body[core].any():
-            continue
-        tiles.append(_Tile(core, _surrounding(grid, core, cubes.box_m[rows]), rows))
-    return tiles
-
-
-def _surrounding(grid: RectilinearGrid, core: Box, boxes: np.ndarray) -> Box:
-    """Cells that the core and all boxes touch."""
-    out = []
-    for axis, (edges, part) in enumerate(zip(grid.edges_m, core, strict=True)):
-        low, high = part.start, part.stop
-        if len(boxes):
-            column = 2 * (2 - axis)
-            low = min(low, int(np.searchsorted(edges, boxes[:, column].min(), "right")) - 1)
-            high = max(high, int(np.searchsorted(edges, boxes[:, column + 1].max(), "left")))
-        out.append(slice(max(low, 0), min(high, len(edges) - 1)))
-    return tuple(out)  # type: ignore[return-value]
-
-
-def _tile_matrices(source: FieldSource, tile: _Tile, cubes: CubeGeometry, combine: str) -> np.ndarray:
-    """Averaged matrices of a tile's cubes, and the absorbed power of its core as a last row: float64."""
-    around = tile.around
-    e, offsets, starts = read_samples(source, around, combine)
-    # Apart, so that the kernel runs along contiguous numbers of one kind.
-    re, im = np.ascontiguousarray(e.real), np.ascontiguousarray(e.imag)
-    del e
-    weight = 0.5 * source.tissue.conductivity_s_m[around].astype(np.float64) * source.grid.volumes_m3(around)
-    ez, ey, ex = (a[s.start : s.stop + 1] for a, s in zip(source.grid.edges_m, around, strict=True))
-    z, y, x = (a[[s.start, s.stop]] for a, s in zip(source.grid.edges_m, tile.core, strict=True))
-    boxes = np.vstack([cubes.box_m, np.concatenate([x, y, z])])
-    scale = np.append(1.0 / cubes.mass_kg, 1.0)
-    cell, corner_weight = np.empty((len(boxes), 3, 2), np.int64), np.empty((len(boxes), 3, 4))
-    signed_corners(ez, ey, ex, boxes, cell, corner_weight)
-    entries = packed_entries(source.n_channels)
-    padding = -len(entries[0]) % LANES
-    first, second, imaginary = (np.pad(a, (0, padding)) for a in entries)
-    shape = (*(s + 1 for s in weight.shape), LANES)
-    workers = max(1, min(get_num_threads(), 2 * _BYTES // (8 * int(np.prod(shape)))))
-    tables = np.empty((workers, *shape))
-    out = np.empty((len(boxes), len(first)))
-    average_entries(
-        re,
-        im,
-        offsets,
-        starts,
-        weight,
-        _spans(weight),
-        first,
-        second,
-        imaginary,
-        cell,
-        corner_weight,
-        scale,
-        tables,
-        out,
-    )
-    return out[:, : len(entries[0])]
-
-
-def _spans(weight: np.ndarray) -> np.ndarray:
-    """First and one past the last cell of nonzero weight in each row, (nz, ny, 2) int64."""
-    filled = weight > 0
-    low = filled.argmax(axis=2)
-    high = weight.shape[2] - filled[:, :, ::-1].argmax(axis=2)
-    return np.stack([low, np.where(filled.any(axis=2), high, low)], axis=-1)
 
 
 def _metadata(source: FieldSource, cubes: CubeGeometry, combine: str) -> Metadata:

@@ -53,16 +53,14 @@ def find_cubes(
     ez, ey, ex = grid.edges_m
     volumes = grid.volumes_m3()
     rho = tissue.density_kg_m3.astype(np.float64)
-    mass = summed_volume(rho * volumes)
-    solid = summed_volume(np.where(body, volumes, 0.0))
+    table = summed_volumes(rho * volumes, np.where(body, volumes, 0.0))
     longest = 2.0 * max(float(e[-1] - e[0]) for e in (ez, ey, ex))
     boxes = np.zeros((len(voxels), 6))
     state = np.zeros(len(voxels), np.uint8)
     for a in range(0, len(voxels), _STEP):
         part = slice(a, a + _STEP)
         centred_cubes(
-            mass,
-            solid,
+            table,
             body,
             rho,
             ez,
@@ -99,7 +97,7 @@ def find_cubes(
         for a in range(0, len(surface), _STEP):
             part = slice(a, a + _STEP)
             face_cubes(
-                mass,
+                table,
                 rho,
                 ez,
                 ey,
@@ -123,7 +121,7 @@ def find_cubes(
             ]
         ).astype(np.uint8)
         out_boxes = np.concatenate([boxes[valid], face_boxes[which, face], boxes[points]])
-        order = np.lexsort((kind, served))
+        order = np.argsort(served, kind="stable")
         served, kind, out_boxes = served[order], kind[order], out_boxes[order]
     lost_count = int((state == VoxelStatus.UNSERVED).sum())
     if lost_count:
@@ -138,7 +136,7 @@ def find_cubes(
     status = np.zeros(grid.shape, np.uint8)
     status[tuple(voxels.T)] = status_of
     masses = np.empty(len(out_boxes))
-    box_integrals(mass, ez, ey, ex, out_boxes, masses)
+    box_integrals(table[..., 0], ez, ey, ex, out_boxes, masses)
     return CubeGeometry(
         grid=grid,
         status=status,
@@ -152,11 +150,12 @@ def find_cubes(
     )
 
 
-def summed_volume(cells: np.ndarray) -> np.ndarray:
-    """Summed volume (nz+1, ny+1, nx+1), float64, of integrals over cells (nz, ny, nx)."""
-    table = np.zeros(tuple(s + 1 for s in cells.shape))
-    table[1:, 1:, 1:] = cells
-    cumulate(table)
+def summed_volumes(*cells: np.ndarray) -> np.ndarray:
+    """Summed volumes (nz+1, ny+1, nx+1, M), float64, of M integrals over cells (nz, ny, nx)."""
+    table = np.zeros((*(s + 1 for s in cells[0].shape), len(cells)))
+    for m, integrals in enumerate(cells):
+        table[1:, 1:, 1:, m] = integrals
+        cumulate(table[..., m])
     return table
 
 

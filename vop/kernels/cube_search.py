@@ -5,113 +5,13 @@ from __future__ import annotations
 import numpy as np
 from numba import njit, prange
 
-from vop.kernels.averaging import box_integral, locate
+from vop.kernels.averaging import locate
+from vop.kernels.cube_sides import find_side, integral_at, make_box, set_ends
 
-#: Relative error of a cube's mass at which the search for its side ends; the standard asks 1e-4.
-_MASS_ERROR = 1e-10
 #: Ties of "10 %", "5 %" and "wholly inside" resolve to more candidates within this.
 _TIE = 1e-9
 #: Neighbouring voxels in a row, each of which starts the search at the side of the one before.
 _RUN = 64
-
-
-@njit(cache=True, nogil=True)
-def make_box(kind, side, k, j, i, ez, ey, ex, box):
-    """Box of a cube: centred on the voxel (kind 1), or with the voxel's outer face in one of its faces."""
-    x = 0.5 * (ex[i] + ex[i + 1])
-    y = 0.5 * (ey[j] + ey[j + 1])
-    z = 0.5 * (ez[k] + ez[k + 1])
-    h = 0.5 * side
-    box[0], box[1], box[2], box[3], box[4], box[5] = x - h, x + h, y - h, y + h, z - h, z + h
-    if kind == 2:
-        box[0], box[1] = ex[i], ex[i] + side
-    elif kind == 3:
-        box[0], box[1] = ex[i + 1] - side, ex[i + 1]
-    elif kind == 4:
-        box[2], box[3] = ey[j], ey[j] + side
-    elif kind == 5:
-        box[2], box[3] = ey[j + 1] - side, ey[j + 1]
-    elif kind == 6:
-        box[4], box[5] = ez[k], ez[k] + side
-    elif kind == 7:
-        box[4], box[5] = ez[k + 1] - side, ez[k + 1]
-
-
-@njit(cache=True, nogil=True)
-def _mass(table, kind, side, k, j, i, ez, ey, ex, box):
-    make_box(kind, side, k, j, i, ez, ey, ex, box)
-    return box_integral(table, ez, ey, ex, box)
-
-
-@njit(cache=True, nogil=True)
-def find_side(table, kind, k, j, i, ez, ey, ex, wanted, guess, longest, box):
-    """A side whose cube holds the mass ``wanted``; −1 where even ``longest`` does not.
-
-    The mass is nearly proportional to the volume, so that secants over side³ from a good guess arrive in
-    a few steps; where they do not, a bracket and the Illinois form of regula falsi (Dowell & Jarratt, BIT
-    1971;11:168) do, for the mass never falls as the side grows.
-    """
-    good = _MASS_ERROR * wanted
-    before, f_before = 0.0, -wanted
-    now = min(guess, longest) ** 3
-    for _ in range(8):
-        side = now ** (1.0 / 3.0)
-        f = _mass(table, kind, side, k, j, i, ez, ey, ex, box) - wanted
-        if abs(f) <= good:
-            return side
-        if f == f_before:
-            break
-        following = now - f * (now - before) / (f - f_before)
-        before, f_before = now, f
-        now = following
-        if not (now > 0.0 and now < longest * longest * longest):
-            break
-    low, f_low = 0.0, -wanted
-    high = min(guess, longest)
-    f_high = _mass(table, kind, high, k, j, i, ez, ey, ex, box) - wanted
-    while f_high < -good:
-        if high >= longest:
-            return -1.0
-        low, f_low = high, f_high
-        high = min(1.2 * high, longest)
-        f_high = _mass(table, kind, high, k, j, i, ez, ey, ex, box) - wanted
-    last = 0
-    for _ in range(200):
-        if abs(f_high) <= good or high - low <= 1e-15 * high:
-            break
-        c_low, c_high = low * low * low, high * high * high
-        x = ((c_low * f_high - c_high * f_low) / (f_high - f_low)) ** (1.0 / 3.0)
-        if not (x > low and x < high):
-            x = 0.5 * (low + high)
-        f = _mass(table, kind, x, k, j, i, ez, ey, ex, box) - wanted
-        if f < -good:
-            low, f_low = x, f
-            if last == -1:
-                f_high *= 0.5
-            last = -1
-        else:
-            high, f_high = x, f
-            if last == 1:
-                f_low *= 0.5
-            last = 1
-    return high
-
-
-@njit(cache=True, nogil=True)
-def smallest_side(table, kind, k, j, i, ez, ey, ex, wanted, side, box):
-    """Where the mass has a plateau (only a cube with background can), its beginning; else ``side``."""
-    enough = wanted * (1.0 - _MASS_ERROR)
-    high = side * (1.0 - 1e-6)
-    if _mass(table, kind, high, k, j, i, ez, ey, ex, box) < enough:
-        return side
-    low = 0.0
-    while high - low > 1e-12 * high:
-        middle = 0.5 * (low + high)
-        if _mass(table, kind, middle, k, j, i, ez, ey, ex, box) >= enough:
-            high = middle
-        else:
-            low = middle
-    return high
 
 
 @njit(cache=True, nogil=True)
@@ -160,36 +60,33 @@ def faces_meet_tissue(body, ez, ey, ex, box):
 
 
 @njit(cache=True, nogil=True, parallel=True)
-def centred_cubes(mass, tissue, body, rho, ez, ey, ex, voxels, wanted, longest, boxes, state):
+def centred_cubes(table, body, rho, ez, ey, ex, voxels, wanted, longest, boxes, state):
     """Centred cube of each voxel; state 1 valid, 3 not valid, 4 no cube holds the mass.
 
-    mass, tissue : summed volumes (nz+1, ny+1, nx+1) of mass and of tissue volume.
+    table : summed volumes (nz+1, ny+1, nx+1, 2) of mass and of tissue volume.
     voxels : (V, 3) int64 of (k, j, i). boxes : (V, 6), state : (V,) uint8, written.
     """
     runs = (voxels.shape[0] + _RUN - 1) // _RUN
     for run in prange(runs):
+        at, slope = np.empty((3, 2)), np.empty((3, 2))
+        cell, here, change = np.empty((3, 2), np.int64), np.empty((3, 4)), np.empty((3, 4))
         guess = 0.0
         for v in range(run * _RUN, min((run + 1) * _RUN, voxels.shape[0])):
             k, j, i = voxels[v]
-            box = boxes[v]
             if guess <= 0.0:
                 guess = (wanted / rho[k, j, i]) ** (1.0 / 3.0)
-            side = find_side(mass, 1, k, j, i, ez, ey, ex, wanted, guess, longest, box)
+            set_ends(1, k, j, i, ez, ey, ex, at, slope)
+            side, t = find_side(table, ez, ey, ex, at, slope, wanted, guess, longest, cell, here, change)
             guess = side
             if side < 0.0:
                 state[v] = 4
                 continue
-            make_box(1, side, k, j, i, ez, ey, ex, box)
+            make_box(at, slope, side, boxes[v])
             volume = side * side * side
-            background = volume - box_integral(tissue, ez, ey, ex, box)
-            if background <= 1e-12 * volume:
-                state[v] = 1
-                continue
-            shortest = smallest_side(mass, 1, k, j, i, ez, ey, ex, wanted, side, box)
-            make_box(1, shortest, k, j, i, ez, ey, ex, box)
-            volume = shortest * shortest * shortest
-            background = volume - box_integral(tissue, ez, ey, ex, box)
-            if background <= (0.1 + _TIE) * volume and faces_meet_tissue(body, ez, ey, ex, box):
+            background = volume - integral_at(table, 1, cell, here, change, t)
+            if background <= _TIE * volume or (
+                background <= (0.1 + _TIE) * volume and faces_meet_tissue(body, ez, ey, ex, boxes[v])
+            ):
                 state[v] = 1
             else:
                 state[v] = 3
@@ -247,21 +144,26 @@ def mark_used(boxes, state, ez, ey, ex, count):
 
 
 @njit(cache=True, nogil=True, parallel=True)
-def face_cubes(mass, rho, ez, ey, ex, voxels, wanted, longest, boxes, chosen):
+def face_cubes(table, rho, ez, ey, ex, voxels, wanted, longest, boxes, chosen):
     """The six face-anchored cubes of each voxel, and which of them compete: 5 % of the least volume.
 
-    boxes : (V, 6, 6), chosen : (V, 6) bool, written.
+    table : as for :func:`centred_cubes`. boxes : (V, 6, 6), chosen : (V, 6) bool, written.
     """
+    within = 1.05 * (1.0 + _TIE)
     for v in prange(voxels.shape[0]):
+        at, slope = np.empty((3, 2)), np.empty((3, 2))
+        cell, here, change = np.empty((3, 2), np.int64), np.empty((3, 4)), np.empty((3, 4))
         k, j, i = voxels[v]
         sides = np.empty(6)
-        least = np.inf
+        least = longest
         for f in range(6):
-            guess = (wanted / rho[k, j, i]) ** (1.0 / 3.0) * 1.02
-            sides[f] = find_side(mass, f + 2, k, j, i, ez, ey, ex, wanted, guess, longest, boxes[v, f])
+            # A cube that is larger than the least so far allows need not be followed to its end.
+            limit = min(longest, least * (1.06 ** (1.0 / 3.0)))
+            guess = (wanted / rho[k, j, i]) ** (1.0 / 3.0)
+            set_ends(f + 2, k, j, i, ez, ey, ex, at, slope)
+            sides[f], _ = find_side(table, ez, ey, ex, at, slope, wanted, guess, limit, cell, here, change)
             if sides[f] > 0.0:
-                sides[f] = smallest_side(mass, f + 2, k, j, i, ez, ey, ex, wanted, sides[f], boxes[v, f])
-                make_box(f + 2, sides[f], k, j, i, ez, ey, ex, boxes[v, f])
+                make_box(at, slope, sides[f], boxes[v, f])
                 least = min(least, sides[f])
         for f in range(6):
-            chosen[v, f] = sides[f] > 0.0 and sides[f] ** 3 <= 1.05 * (1.0 + _TIE) * least**3
+            chosen[v, f] = sides[f] > 0.0 and sides[f] ** 3 <= within * least**3
