@@ -172,7 +172,9 @@ class FieldSource(ABC):
         scale = 1.0 / complex(self.channel_scale[channel])
         if self.conventions.phasor == "rms":
             scale *= np.sqrt(2.0)
-        values = np.multiply(raw, np.complex64(scale), dtype=np.complex64)
+        # What is not finite matters in tissue alone, and is refused there by whoever uses it.
+        with np.errstate(invalid="ignore", over="ignore"):
+            values = np.multiply(raw, np.complex64(scale), dtype=np.complex64)
         if self.conventions.time_sign == "-":
             np.conj(values, out=values)
         return values
