@@ -19,7 +19,11 @@ from vop.kernels.proof_psd import cholesky, combine, expand, largest_entry, posi
 OPEN, POOLED, SINGLE, COMBINED = 0, 1, 2, 3
 
 #: Combinations remembered from earlier targets, most recently used first.
-_POOL = 12
+_POOL = 48
+#: Witnesses remembered, from earlier targets too; half of them at the start of each target.
+_WITNESSES = 48
+#: Probes that all columns are held against, the most telling ones of each target.
+_SIEVE = 12
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -76,14 +80,17 @@ def _to_front(order, at):
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def search(targets, extra, columns, columns_t, probes, probe_values, scale, convex, n, gain):
+def search(
+    targets, extra, columns, columns_t, probes, probe_values, probe_mean, probe_spread, scale, convex, n, gain
+):
     """Propose weights for each target.
 
     Parameters
     ----------
     targets : (R, n²) float32. extra : (n²,) float64 added to every combination.
     columns : (K, n²) float32; columns_t : (n², K) float64, its transpose.
-    probes : (P, n²) float64 functionals; probe_values : (P, K), theirs on ``columns``.
+    probes : (P, n²) float64 functionals; probe_values : (P, K), theirs on ``columns``, of mean
+        probe_mean (P,) and spread probe_spread (P,).
     scale : worst-case eigenvalue, sets what counts as converged.
     convex : whether to go on to the convex problem where no single column does.
     gain : (n²,) inner weights of the packing.
@@ -108,8 +115,9 @@ def search(targets, extra, columns, columns_t, probes, probe_values, scale, conv
     h = np.empty((n, n), dtype=np.complex128)
     factor = np.zeros((n, n), dtype=np.complex128)
     packed = np.empty(width)
-    f = np.empty(width)
     target = np.empty(width)
+    witnesses, known, wanted = np.empty((_WITNESSES, width)), 0, np.empty(_WITNESSES)
+    asked, telling = np.empty(probes.shape[0]), np.zeros(probes.shape[0], dtype=np.int64)
     margins = np.empty(n_columns)
 
     limit = min(n_columns, max(48, 8 * n))
@@ -145,13 +153,32 @@ def search(targets, extra, columns, columns_t, probes, probe_values, scale, conv
                 break
 
         if how[r] == OPEN:
-            _probe(target, probes, probe_values, margins)
-            best = _single(targets[r], target, extra, columns, margins, n, gain, packed, f, h, factor)
+            _most_telling(target, probes, probe_mean, probe_spread, asked, telling)
+            sieve = min(_SIEVE, probes.shape[0])
+            _probe(target, probes, probe_values, telling, sieve, asked, margins)
+            best, known = _single(
+                targets[r],
+                target,
+                extra,
+                columns,
+                margins,
+                asked,
+                telling,
+                probe_values,
+                wanted,
+                witnesses,
+                known,
+                n,
+                gain,
+                packed,
+                h,
+                factor,
+            )
             if best >= 0:
                 how[r] = SINGLE
                 chosen[0], c[0], m = best, 1.0, 1
             elif convex:
-                _probe(target, probes, probe_values, margins)
+                _probe(target, probes, probe_values, telling, probes.shape[0], asked, margins)
                 status, m, chosen, c, bound[r] = convex_weights(
                     columns, columns_t, target, margins, scale, n, gain, limit, witness[r]
                 )
@@ -183,47 +210,114 @@ def search(targets, extra, columns, columns_t, probes, probe_values, scale, conv
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def _probe(target, probes, probe_values, margins):
-    """margins[k] = the least of tr(C_k X) − tr(T X) over the probes X."""
+def _probe(target, probes, probe_values, order, count, wanted, margins):
+    """margins[k] = the least of tr(C_k X) − tr(T X) over the first ``count`` probes X in ``order``."""
     for k in range(margins.shape[0]):
         margins[k] = np.inf
-    for q in range(probes.shape[0]):
-        wanted = _dot(target, probes[q])
+    for place in range(count):
+        q = order[place]
+        asked = wanted[q]
         row = probe_values[q]
         for k in range(margins.shape[0]):
-            margins[k] = min(margins[k], row[k] - wanted)
+            # Not min(): its care for NaN keeps the loop from being vectorised.
+            margin = row[k] - asked
+            margins[k] = margin if margin < margins[k] else margins[k]
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def _single(row, target, extra, columns, margins, n, gain, packed, f, h, factor):
-    """A column that covers the target by itself, or −1.
+def _most_telling(target, probes, probe_mean, probe_spread, wanted, order):
+    """wanted[q] = tr(T X_q); order: probes along which the target asks for most, by columns' standards."""
+    score = np.empty(order.shape[0])
+    for q in range(order.shape[0]):
+        wanted[q] = _dot(target, probes[q])
+        score[q] = (wanted[q] - probe_mean[q]) / probe_spread[q]
+        place = q
+        while place > 0 and score[order[place - 1]] < score[q]:
+            order[place] = order[place - 1]
+            place -= 1
+        order[place] = q
 
-    Columns are tried in descending order of their margins; what stops the factorisation of one is a
-    witness that excludes others.
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _single(
+    row,
+    target,
+    extra,
+    columns,
+    margins,
+    asked,
+    order,
+    probe_values,
+    wanted,
+    witnesses,
+    known,
+    n,
+    gain,
+    packed,
+    h,
+    factor,
+):
+    """A column that covers the target by itself, or −1; and how many witnesses are known after.
+
+    ``margins`` holds what the first _SIEVE probes leave. Columns are tried in descending order of
+    their margins; the other probes and the witnesses are applied only to a column that is about to
+    be tried. What stops the factorisation of a column is a new witness, against the others and,
+    likely, for the targets to come.
     """
     x = np.empty(n, dtype=np.complex128)
     square = np.empty((n, n), dtype=np.complex128)
+    alive = np.empty(margins.shape[0], dtype=np.int64)
+    n_probes = order.shape[0]
+    applied = np.full(margins.shape[0], min(_SIEVE, n_probes), dtype=np.int64)
+    count = 0
+    for k in range(margins.shape[0]):
+        if margins[k] >= 0.0:
+            alive[count] = k
+            count += 1
     pick, one = np.zeros(1, dtype=np.int64), np.ones(1)
     extra_is_zero = largest_entry(extra) == 0.0
-    while True:
-        best = 0
-        for k in range(margins.shape[0]):
-            if margins[k] > margins[best]:
-                best = k
-        if not margins[best] >= 0.0:
-            return -1
+    half = witnesses.shape[0] // 2
+    if known > half:
+        for q in range(half):
+            for p in range(witnesses.shape[1]):
+                witnesses[q, p] = witnesses[known - half + q, p]
+        known = half
+    for q in range(known):
+        wanted[q] = _dot(target, witnesses[q])
+    while count > 0:
+        place = 0
+        for a in range(count):
+            if margins[alive[a]] > margins[alive[place]]:
+                place = a
+        best = alive[place]
+        before = margins[best]
+        while applied[best] < n_probes + known and margins[best] >= 0.0:
+            if applied[best] < n_probes:
+                q = order[applied[best]]
+                margin = probe_values[q, best] - asked[q]
+            else:
+                q = applied[best] - n_probes
+                margin = _dot(columns[best], witnesses[q]) - wanted[q]
+            margins[best] = min(margins[best], margin)
+            applied[best] += 1
+        if margins[best] < before:
+            if margins[best] < 0.0:
+                count -= 1
+                alive[place] = alive[count]
+            continue
         pick[0] = best
         entries = combine(row, extra, columns, pick, one, n, packed)
         at = _covers(packed, entries, n, 2.0, h, factor)
         if at == n or (extra_is_zero and largest_entry(packed) == 0.0):
-            return best
-        failing_direction(factor, n, at, x)
-        functional(x, n, gain, square, f)
-        wanted = _dot(target, f)
-        for k in range(margins.shape[0]):
-            if margins[k] >= 0.0:
-                margins[k] = min(margins[k], _dot(columns[k], f) - wanted)
-        margins[best] = -np.inf
+            return best, known
+        count -= 1
+        alive[place] = alive[count]
+        if known < witnesses.shape[0]:
+            failing_direction(factor, n, at, x)
+            functional(x, n, gain, square, witnesses[known])
+            wanted[known] = _dot(target, witnesses[known])
+            known += 1
+    return -1, known
 
 
 @njit(cache=True, nogil=True, error_model="numpy")

@@ -58,6 +58,8 @@ class Cover:
 
     def replaced(self, at: np.ndarray, parts: list[Cover]) -> Cover:
         """This cover with the rows ``at`` replaced by one-row covers."""
+        if not len(at):
+            return self
         new = {int(r): part for r, part in zip(at, parts, strict=True)}
         return Cover.joined([new.get(r, self.rows(r, r + 1)) for r in range(len(self))])
 

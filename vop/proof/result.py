@@ -137,14 +137,13 @@ class ProofResult:
 
 
 def _lines(name: str, part: Statement, what: str, by: str) -> list[str]:
-    lines = [
-        f"{name:<15} {part.n_proved} of {part.n_targets} {what} proved: {part.n_single} by one {by}, "
-        f"{part.n_proved - part.n_single} by combinations of up to {part.most_terms}"
-    ]
+    how = f"{part.n_single} by one {by}"
+    if part.n_proved > part.n_single:
+        how += f", {part.n_proved - part.n_single} by combinations of up to {part.most_terms}"
+    lines = [f"{name:<15} {part.n_proved} of {part.n_targets} {what} proved: {how}"]
     if part.n_proved:
         lines.append(
-            f"  margin        at least {part.margin:.3g} of worst case, least at {what} index "
-            f"{part.margin_index}"
+            f"  margin        at least {part.margin:.3g} of worst case, least at index {part.margin_index}"
         )
     if part.unproved:
         lines += [f"  NOT PROVED    {item.text()}" for item in part.unproved[:_NAMED]]

@@ -53,6 +53,9 @@ class Columns:
         self.probe_values = np.empty((len(x), len(packed)))
         for f, values in zip(self.probes, self.probe_values, strict=True):
             kernel.values_on(self.packed, f, values)
+        self.probe_mean = self.probe_values.mean(axis=1)
+        spread_of_values = self.probe_values.std(axis=1)
+        self.probe_spread = spread_of_values + 1e-12 * np.abs(self.probe_mean) + 1e-300
 
     def search(self, targets: np.ndarray, extra: np.ndarray, scale: float) -> Found:
         """Weights for (R, n²) float32 ``targets``, one after another."""
@@ -63,6 +66,8 @@ class Columns:
             self.transposed,
             self.probes,
             self.probe_values,
+            self.probe_mean,
+            self.probe_spread,
             scale,
             True,
             self.n,
