@@ -142,9 +142,7 @@ def _fill(
         absorbed += power[lanes]
         for a in range(0, count, step):
             part = averages[a : a + step]
-            packed = scratch.array("packed", (len(part), len(lanes)))
-            np.take(part, lanes, axis=1, out=packed, mode="clip")
-            rows[at + a : at + a + len(part)] = round_outward(packed)
+            rows[at + a : at + a + len(part)] = round_outward(part, lanes)
         at += count
         progress("local matrices", done + 1, len(tiles))
     return absorbed

@@ -141,32 +141,34 @@ def pack_row(matrix, n, row):
 
 
 @njit(cache=True, parallel=True)
-def _round_outward(packed, n, out):
+def _round_outward(wide, columns, n, out):
     m = n * (n - 1) // 2
-    for r in prange(packed.shape[0]):
+    for r in prange(wide.shape[0]):
+        packed = wide[r]
         grow = np.zeros(n)
         at = n
         for i in range(n):
             for j in range(i + 1, n):
                 error = 0.0
                 for k in (at, at + m):
-                    out[r, k] = np.float32(packed[r, k])
-                    error += abs(np.float64(out[r, k]) - packed[r, k])
+                    value = packed[columns[k]]
+                    out[r, k] = np.float32(value)
+                    error += abs(np.float64(out[r, k]) - value)
                 grow[i] += error
                 grow[j] += error
                 at += 1
         for i in range(n):
             # The sums above round too: 4n·2⁻⁵³ relative is more than they can lose.
-            wanted = packed[r, i] + grow[i] * (1.0 + 4.0 * n * U64)
+            wanted = packed[columns[i]] + grow[i] * (1.0 + 4.0 * n * U64)
             wanted += abs(wanted) * 2.0 * U64
-            value = np.float32(wanted)
-            if np.float64(value) < wanted:
-                value = np.nextafter(value, np.float32(np.inf))
-            out[r, i] = value
+            rounded = np.float32(wanted)
+            if np.float64(rounded) < wanted:
+                rounded = np.nextafter(rounded, np.float32(np.inf))
+            out[r, i] = rounded
     return out
 
 
-def round_outward(packed: np.ndarray) -> np.ndarray:
+def round_outward(packed: np.ndarray, columns: np.ndarray | None = None) -> np.ndarray:
     """Round packed float64 matrices to float32 so that none becomes smaller: result ⪰ input.
 
     Off-diagonal entries are rounded to nearest; each diagonal entry grows by the sum of the moduli
@@ -175,12 +177,16 @@ def round_outward(packed: np.ndarray) -> np.ndarray:
 
     Parameters
     ----------
-    packed : (N, n²) float64, finite.
+    packed : (N, n²) float64, finite; or wider, where ``columns`` is given.
+    columns : (n²,) int64, in which column of ``packed`` each packed number lies.
 
     Returns
     -------
     (N, n²) float32.
     """
     packed = np.ascontiguousarray(packed, dtype=np.float64)
-    n = channels_from_width(packed.shape[-1])
-    return _round_outward(packed, n, np.empty(packed.shape, dtype=np.float32))
+    if columns is None:
+        columns = np.arange(packed.shape[-1])
+    n = channels_from_width(columns.size)
+    out = np.empty((*packed.shape[:-1], n * n), dtype=np.float32)
+    return _round_outward(packed, columns, n, out)
