@@ -187,6 +187,35 @@ def test_overestimation_beyond_the_bound_is_refuted(pair: tuple[vop.VopSet, vop.
         assert refuted == set(np.flatnonzero(needed > eps))
 
 
+def test_a_bound_is_called_relative_exactly_where_s_is_below_a_combination_of_matrices(
+    pair: tuple[vop.VopSet, vop.SarModel], tmp_path: Path
+) -> None:
+    # Reference: clarabel says by how much Σ c Q can exceed a direction's S; S is scaled to either side.
+    _, model = pair
+    rng = np.random.default_rng(9)
+    shape = np.cov(rng.normal(size=(4, 30))) + np.eye(4)
+    root = np.linalg.inv(np.linalg.cholesky(shape))
+    program = SemidefiniteProgram(root @ model.matrices() @ root.conj().T)
+    largest = program.best_margin(np.zeros((4, 4)))
+    for factor, wanted in ((0.9999, True), (1.0001, False)):
+        s = factor * largest * shape
+        vop_set = vop.VopSet(
+            packed=pack(model.matrices() + 0.01 * s, np.float32),
+            overestimation=0.011,
+            worst_case=plain_clustering(model, 0.5).worst_case,
+            overestimation_matrix=s.astype(complex),
+            core_index=np.arange(len(model)),
+            method="by hand",
+            metadata=model.metadata,
+        )
+        path = tmp_path / f"{factor}.h5"
+        result = prove(vop_set, model, certificate_path=path)
+        assert result.holds
+        assert result.relative == wanted == recheck(vop_set, model, path).relative
+        assert ("for every w" in result.summary()) == wanted
+        assert ("not proved, so that" in result.summary()) == (not wanted)
+
+
 def test_core_indices_are_hints_and_never_evidence(pair: tuple[vop.VopSet, vop.SarModel]) -> None:
     vop_set, model = pair
     for wrong in (-1, 0, len(model) - 1, 10**9, -7):

@@ -15,9 +15,6 @@ from vop.hermitian import pack_row
 from vop.kernels.proof_convex import FOUND, convex_weights
 from vop.kernels.proof_psd import cholesky, combine, expand, largest_entry, positive_trace, shift_bound
 
-#: How a target was covered.
-OPEN, POOLED, SINGLE, COMBINED = 0, 1, 2, 3
-
 #: Combinations remembered from earlier targets, most recently used first.
 _POOL = 48
 #: Witnesses remembered, from earlier targets too; half of them at the start of each target.
@@ -81,7 +78,7 @@ def _to_front(order, at):
 
 @njit(cache=True, nogil=True, error_model="numpy")
 def search(
-    targets, extra, columns, columns_t, probes, probe_values, probe_mean, probe_spread, scale, convex, n, gain
+    targets, extra, columns, columns_t, probes, probe_values, probe_mean, probe_spread, scale, n, gain
 ):
     """Propose weights for each target.
 
@@ -92,12 +89,10 @@ def search(
     probes : (P, n²) float64 functionals; probe_values : (P, K), theirs on ``columns``, of mean
         probe_mean (P,) and spread probe_spread (P,).
     scale : worst-case eigenvalue, sets what counts as converged.
-    convex : whether to go on to the convex problem where no single column does.
     gain : (n²,) inner weights of the packing.
 
     Returns
     -------
-    how : (R,) int8, OPEN … COMBINED.
     starts, index, weight : terms of each target as in :func:`vop.kernels.proof_psd.certify`.
     bound : (R,) float64, for open targets an upper bound of the least eigenvalue that any weights
         reach (float arithmetic), for others ∞.
@@ -105,7 +100,6 @@ def search(
     """
     n_targets, width = targets.shape
     n_columns = columns.shape[0]
-    how = np.zeros(n_targets, dtype=np.int8)
     starts = np.zeros(n_targets + 1, dtype=np.int64)
     index = np.empty(4 * n_targets + 64, dtype=np.int64)
     weight = np.empty(4 * n_targets + 64)
@@ -142,20 +136,21 @@ def search(
         for p in range(width):
             target[p] = np.float64(targets[r, p]) - extra[p]
 
+        covered = False
         for slot in range(filled):
             s = order[slot]
             for p in range(width):
                 packed[p] = pool_sum[s, p] - target[p]
             entries = pool_entries[s] + target_entries + extra_entries
             if _covers(packed, entries, n, pool_terms[s] + 1.0, h, factor) == n:
-                how[r] = POOLED
+                covered = True
                 _to_front(order, slot)
                 break
 
-        if how[r] == OPEN:
+        if not covered:
             _most_telling(target, probes, probe_mean, probe_spread, asked, telling)
             sieve = min(_SIEVE, probes.shape[0])
-            _probe(target, probes, probe_values, telling, sieve, asked, margins)
+            _probe(probe_values, telling, sieve, asked, margins)
             best, known = _single(
                 targets[r],
                 target,
@@ -175,25 +170,25 @@ def search(
                 factor,
             )
             if best >= 0:
-                how[r] = SINGLE
+                covered = True
                 chosen[0], c[0], m = best, 1.0, 1
-            elif convex:
-                _probe(target, probes, probe_values, telling, probes.shape[0], asked, margins)
+            else:
+                _probe(probe_values, telling, probes.shape[0], asked, margins)
                 status, m, chosen, c, bound[r] = convex_weights(
                     columns, columns_t, target, margins, scale, n, gain, limit, witness[r]
                 )
                 if status == FOUND:
                     entries = combine(targets[r], extra, columns, chosen[:m], c[:m], n, packed)
                     if _covers(packed, entries, n, m + 1.0, h, factor) == n:
-                        how[r] = COMBINED
-            if how[r] != OPEN:
+                        covered = True
+            if covered:
                 _to_front(order, _POOL - 1)
                 s = order[0]
                 pool_terms[s] = m
                 pool_entries[s] = _remember(columns, chosen, c, m, pool_index[s], pool_weight[s], pool_sum[s])
                 filled = min(filled + 1, _POOL)
 
-        if how[r] != OPEN:
+        if covered:
             bound[r] = np.inf
             for p in range(width):
                 witness[r, p] = 0.0
@@ -206,11 +201,11 @@ def search(
                 index[first + t] = pool_index[s, t]
                 weight[first + t] = pool_weight[s, t]
     total = starts[n_targets]
-    return how, starts, index[:total], weight[:total], bound, witness
+    return starts, index[:total], weight[:total], bound, witness
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def _probe(target, probes, probe_values, order, count, wanted, margins):
+def _probe(probe_values, order, count, wanted, margins):
     """margins[k] = the least of tr(C_k X) − tr(T X) over the first ``count`` probes X in ``order``."""
     for k in range(margins.shape[0]):
         margins[k] = np.inf

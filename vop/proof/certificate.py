@@ -7,6 +7,7 @@ On disk (HDF5, format "vop-certificate", version 1):
 * ``underestimation/…`` with, for matrix v of the model, the terms ``starts[v]`` … ``starts[v+1]`` of
   ``index`` (VOPs) and ``weight`` (int64, in units of 2⁻⁴⁸, of sum exactly 2⁴⁸);
 * ``overestimation/…`` likewise for each VOP, over matrices of the model;
+* ``relative_bound/…`` likewise for S, one row, without terms where S ⪯ Σ c Q is not claimed;
 * ``worst_case/row`` and ``worst_case/excitation`` (n,) complex128.
 """
 
@@ -27,7 +28,7 @@ from vop.storage import create_hdf5, open_hdf5, read_header, write_header
 
 FORMAT = "vop-certificate"
 FORMAT_VERSION = 1
-_STATEMENTS = ("underestimation", "overestimation")
+_STATEMENTS = ("underestimation", "overestimation", "relative_bound")
 
 
 @dataclass(frozen=True, eq=False)
@@ -38,12 +39,16 @@ class Certificate:
     model_digest: str
     underestimation: Cover
     overestimation: Cover
+    relative_bound: Cover
     worst_case: Attained
+
+    def _covers(self) -> tuple[Cover, Cover, Cover]:
+        return self.underestimation, self.overestimation, self.relative_bound
 
     def digest(self) -> str:
         """SHA-256, hexadecimal, over everything."""
         sha = hashlib.sha256(f"{self.set_digest} {self.model_digest}".encode())
-        for cover in (self.underestimation, self.overestimation):
+        for cover in self._covers():
             for values in (cover.starts, cover.index, cover.weight):
                 sha.update(np.ascontiguousarray(values, dtype="<i8").data)
         sha.update(str(self.worst_case.row).encode())
@@ -63,7 +68,7 @@ class Certificate:
             handle.attrs["set_digest"] = self.set_digest
             handle.attrs["model_digest"] = self.model_digest
             handle.attrs["digest"] = self.digest()
-            for name, cover in zip(_STATEMENTS, (self.underestimation, self.overestimation), strict=True):
+            for name, cover in zip(_STATEMENTS, self._covers(), strict=True):
                 for part in ("starts", "index", "weight"):
                     handle.create_dataset(f"{name}/{part}", data=getattr(cover, part).astype("<i8"))
             handle["worst_case/row"] = np.int64(self.worst_case.row)
@@ -83,7 +88,7 @@ class Certificate:
             read_header(handle, FORMAT, FORMAT_VERSION)
             covers = []
             for name, rows, columns in zip(
-                _STATEMENTS, (n_matrices, n_vops), (n_vops, n_matrices), strict=True
+                _STATEMENTS, (n_matrices, n_vops, 1), (n_vops, n_matrices, n_matrices), strict=True
             ):
                 cover = Cover(*(_int64(handle, f"{name}/{part}") for part in ("starts", "index", "weight")))
                 if len(cover) != rows:
@@ -101,6 +106,7 @@ class Certificate:
                 str(handle.attrs["model_digest"]),
                 covers[0],
                 covers[1],
+                covers[2],
                 Attained(row, excitation),
             )
             if found.digest() != handle.attrs["digest"]:

@@ -8,22 +8,18 @@ import time
 import numpy as np
 
 from vop.errors import InputError
-from vop.hermitian import identity, pack
-from vop.kernels.proof_search import OPEN
+from vop.hermitian import identity, pack, round_outward
 from vop.progress import Progress, silent
 from vop.proof.certificate import Certificate
 from vop.proof.certify import Certified, certify_cover
 from vop.proof.cover import Cover
-from vop.proof.result import ProofResult, Statement, Unproved
-from vop.proof.search import Columns, Found, search_among_many, search_cover
+from vop.proof.result import LISTED, ProofResult, Statement, Unproved
+from vop.proof.search import WITNESSES, Columns, Found, search_among_many, search_cover
 from vop.proof.witness import examine
 from vop.proof.worst_case import Attained, exact_quotient_reaches, find_attaining
 from vop.sarmodel import SarModel
 from vop.storage import refuse_existing
 from vop.vopset import VopSet
-
-#: Unproved targets, worst first, for which evidence is worked out.
-_EXAMINED = 32
 
 
 def prove(
@@ -41,6 +37,9 @@ def prove(
        no X breaks the bound (minimax), so that nothing true is lost by asking for them.
     2. Bounded overestimation: each A_k ⪯ Σ c_v Q_v + εS likewise.
     3. The worst case that ε refers to is attained by a matrix of the model.
+
+    Where S is not worst case × identity, S ⪯ Σ c_v Q_v is tried too: if proved, ε bounds the relative
+    overestimation; if not, that is no fault, and the result says which.
 
     The weights are searched for with floating-point optimisation; the inequalities are then proved
     by :mod:`vop.kernels.proof_psd` (Rump 2006), whose outcome no tolerance loosens. What is proved
@@ -67,7 +66,8 @@ def prove(
     first = search_cover("proof: searching", model.packed, Columns(vop_set.packed), nothing, scale, progress)
     second = _search_overestimation(vop_set, model, progress)
     attained = find_attaining(model.packed, vop_set.worst_case, progress)
-    certificate = Certificate(vop_set.digest(), model.digest(), first.cover, second.cover, attained)
+    relative = _search_relative(vop_set, model)
+    certificate = Certificate(vop_set.digest(), model.digest(), first.cover, second.cover, relative, attained)
     result = _certified(vop_set, model, certificate, began, progress, (first, second))
     if certificate_path is not None and result.holds:
         certificate.save(certificate_path, vop_set.metadata, force)
@@ -132,20 +132,17 @@ def _search_overestimation(vop_set: VopSet, model: SarModel, progress: Progress)
     hint = np.where((hint >= 0) & (hint < len(model)), hint, -1)
     cover = Cover.single(hint)
     proved = certify_cover("proof: cores", vop_set.packed, model.packed, extra, cover, progress).proved
-    found = Found(
-        cover,
-        np.where(proved, 2, OPEN).astype(np.int8),
-        np.full(len(vop_set), np.inf),
-        np.zeros(vop_set.packed.shape),
-    )
+    bound, witnesses = np.where(proved, np.inf, np.nan), {}
     open_rows = np.flatnonzero(~proved)
     parts = []
     for done, r in enumerate(open_rows):
         one = search_among_many(vop_set.packed[r], model.packed, extra, vop_set.worst_case)
         parts.append(one.cover)
-        found.how[r], found.bound[r], found.witness[r] = one.how[0], one.bound[0], one.witness[0]
+        bound[r] = one.bound[0]
+        if 0 in one.witnesses:
+            witnesses[int(r)] = one.witnesses[0]
         progress("proof: searching cores", done + 1, len(open_rows))
-    return Found(cover.replaced(open_rows, parts), found.how, found.bound, found.witness)
+    return Found(cover.replaced(open_rows, parts), bound, witnesses)
 
 
 def _certified(
@@ -167,6 +164,9 @@ def _certified(
             done, targets, columns, added, found[search] if found else None, vop_set.worst_case
         )
         statements.append(_statement(done, cover, unproved, vop_set.worst_case))
+    relative = certify_cover(
+        "proof: S", _relative_target(vop_set), model.packed, nothing, certificate.relative_bound, progress
+    )
     attained: Attained = certificate.worst_case
     reaches = attained.row >= 0 and exact_quotient_reaches(
         np.asarray(model.packed[attained.row]), attained.excitation, vop_set.worst_case
@@ -176,7 +176,8 @@ def _certified(
         overestimation=statements[1],
         worst_case_attained=reaches,
         worst_case_index=attained.row if reaches else -1,
-        bound_text=_bound_text(vop_set),
+        relative=bool(relative.proved[0]),
+        bound_text=_bound_text(vop_set, bool(relative.proved[0])),
         set_digest=certificate.set_digest,
         model_digest=certificate.model_digest,
         seconds=time.perf_counter() - began,
@@ -206,25 +207,49 @@ def _unproved(
 ) -> tuple[Unproved, ...]:
     rows = np.flatnonzero(~done.proved)
     if found is None:
-        return tuple(Unproved(int(r), float("nan"), None, None, float("nan")) for r in rows)
+        return tuple(Unproved(int(r), float("nan"), None, None, float("nan")) for r in rows[:LISTED])
     rows = rows[np.argsort(found.bound[rows], kind="stable")]
     items = []
-    for place, r in enumerate(rows):
+    for place, r in enumerate(rows[:LISTED]):
         bound = float(found.bound[r])
-        if place < _EXAMINED and bound < 0:
-            items.append(examine(int(r), targets[r], columns, extra, bound, found.witness[r], worst_case))
+        if place < WITNESSES and bound < 0:
+            witness = found.witnesses[int(r)]
+            items.append(examine(int(r), targets[r], columns, extra, bound, witness, worst_case))
         else:
             items.append(Unproved(int(r), -bound / worst_case, None, None, float("nan")))
     return tuple(items)
 
 
-def _bound_text(vop_set: VopSet) -> str:
+def _is_identity(vop_set: VopSet) -> bool:
+    scaled = vop_set.worst_case * identity(vop_set.n_channels)
+    return np.array_equal(pack(vop_set.overestimation_matrix), scaled)
+
+
+def _relative_target(vop_set: VopSet) -> np.ndarray:
+    """S as a float32 row that is nowhere smaller, (1, n²): what covers it covers S."""
+    return round_outward(pack(vop_set.overestimation_matrix)[None])
+
+
+def _search_relative(vop_set: VopSet, model: SarModel) -> Cover:
+    """Weights of S ⪯ Σ c_v Q_v, which would make ε a relative bound; an open row where there are none."""
+    if _is_identity(vop_set):
+        # No combination exceeds the worst case in every direction, save where some Q is S itself.
+        return Cover.single(np.array([-1]))
+    nothing = np.zeros(vop_set.n_channels**2)
+    target = _relative_target(vop_set)[0]
+    return search_among_many(target, model.packed, nothing, vop_set.worst_case).cover
+
+
+def _bound_text(vop_set: VopSet, relative: bool) -> str:
     unit = vop_set.metadata.matrix_unit
     eps, worst = vop_set.overestimation, vop_set.worst_case
-    if np.array_equal(pack(vop_set.overestimation_matrix), worst * identity(vop_set.n_channels)):
+    if _is_identity(vop_set):
         return f"at most {eps:g} × worst case × ‖w‖² above the model's maximum, {eps * worst:.6g} {unit}"
-    largest = float(np.linalg.eigvalsh(vop_set.overestimation_matrix)[-1])
+    if relative:
+        return f"at most {100 * eps:g} % of the model's maximum above it, for every w: S ⪯ Σ c Q is proved"
+    # Rounding of the eigenvalue is far below the digits printed, and upward by them.
+    largest = float(np.linalg.eigvalsh(vop_set.overestimation_matrix)[-1]) * (1 + 1e-5)
     return (
-        f"at most {eps:g} × wᴴSw above the model's maximum, up to {eps * largest:.6g} {unit} "
-        "(S is not the identity)"
+        f"at most {eps:g} × wᴴSw above the model's maximum, no more than {eps * largest:.6g} {unit}; "
+        "S ⪯ Σ c Q is not proved, so that ε is no share of the model's maximum"
     )

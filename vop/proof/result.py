@@ -7,8 +7,8 @@ from typing import Any
 
 import numpy as np
 
-#: Unproved items named in the summary.
-_NAMED = 8
+#: Unproved items kept, and named in the summary.
+LISTED, _NAMED = 1000, 8
 
 
 @dataclass(frozen=True, eq=False)
@@ -48,6 +48,7 @@ class Statement:
     most_terms : most columns combined for one target.
     margin : proved lower bound of λmin(right − left side) over all proved targets, as a fraction of
         the worst case, within about 2 %; margin_index attains it. ∞ and −1 where none is proved.
+    unproved : worst first, LISTED at most.
     """
 
     n_targets: int
@@ -83,6 +84,7 @@ class ProofResult:
     underestimation : every Q_v ⪯ Σ c_k A_k. overestimation : every A_k ⪯ Σ c_v Q_v + εS.
     worst_case_attained : worst_case ≤ max over matrices of λmax, in exact arithmetic, by
         ``worst_case_index``.
+    relative : whether S ⪯ Σ c_v Q_v is proved, which makes ε a bound of the relative overestimation.
     bound_text : what the overestimation is at most, in words.
     """
 
@@ -90,6 +92,7 @@ class ProofResult:
     overestimation: Statement
     worst_case_attained: bool
     worst_case_index: int
+    relative: bool
     bound_text: str
     set_digest: str
     model_digest: str
@@ -130,6 +133,7 @@ class ProofResult:
             "overestimation": self.overestimation.record(),
             "worst_case_attained": self.worst_case_attained,
             "worst_case_index": self.worst_case_index,
+            "relative": self.relative,
             "bound": self.bound_text,
             "set_digest": self.set_digest,
             "model_digest": self.model_digest,
@@ -147,6 +151,7 @@ def _lines(name: str, part: Statement, what: str, by: str) -> list[str]:
         )
     if part.unproved:
         lines += [f"  NOT PROVED    {item.text()}" for item in part.unproved[:_NAMED]]
-        if len(part.unproved) > _NAMED:
-            lines.append(f"  NOT PROVED    and {len(part.unproved) - _NAMED} more")
+        more = part.n_targets - part.n_proved - _NAMED
+        if more > 0:
+            lines.append(f"  NOT PROVED    and {more} more")
     return lines

@@ -19,21 +19,22 @@ _PROBES = 32
 #: Columns that a target of the second statement is tried against at first, and joined per round.
 _SHORTLIST = 256
 _ROUNDS = 24
+#: Open targets of a chunk whose witness is kept.
+WITNESSES = 32
 
 
 @dataclass(frozen=True, eq=False)
 class Found:
     """A proposed cover, with what is known of the targets left open.
 
-    how : (R,) int8, one of OPEN, POOLED, SINGLE, COMBINED of the kernel.
-    bound : (R,) float64, upper bound of λmin that any weights reach where open, else ∞ (float).
-    witness : (R, n²) float64, packed covariance of unit trace that shows it; zero where covered.
+    bound : (R,) float64, upper bound of λmin that any weights reach where open, NaN where nothing is
+    known, ∞ where covered (float arithmetic). witnesses : of some open targets, those of least bound
+    first of all, the packed covariance (n²,) of unit trace that shows it.
     """
 
     cover: Cover
-    how: np.ndarray
     bound: np.ndarray
-    witness: np.ndarray
+    witnesses: dict[int, np.ndarray]
 
 
 class Columns:
@@ -59,7 +60,7 @@ class Columns:
 
     def search(self, targets: np.ndarray, extra: np.ndarray, scale: float) -> Found:
         """Weights for (R, n²) float32 ``targets``, one after another."""
-        how, starts, index, weight, bound, witness = kernel.search(
+        starts, index, weight, bound, witness = kernel.search(
             targets,
             extra,
             self.packed,
@@ -69,12 +70,13 @@ class Columns:
             self.probe_mean,
             self.probe_spread,
             scale,
-            True,
             self.n,
             self.gain,
         )
         cover = Cover(starts, index, np.ldexp(weight, WEIGHT_BITS).astype(np.int64))
-        return Found(cover, how, bound, witness)
+        failed = np.flatnonzero(bound < 0)
+        least = failed[np.argsort(bound[failed], kind="stable")[:WITNESSES]]
+        return Found(cover, bound, {int(r): witness[r].copy() for r in least})
 
 
 def search_cover(
@@ -97,12 +99,8 @@ def search_cover(
         return columns.search(np.array(targets[first:last], dtype=np.float32, order="C"), extra, scale)
 
     parts = map_chunks(label, len(targets), _CHUNK, work, progress)
-    return Found(
-        Cover.joined([p.cover for p in parts]),
-        np.concatenate([p.how for p in parts]),
-        np.concatenate([p.bound for p in parts]),
-        np.concatenate([p.witness for p in parts]),
-    )
+    witnesses = {chunk * _CHUNK + r: x for chunk, part in enumerate(parts) for r, x in part.witnesses.items()}
+    return Found(Cover.joined([p.cover for p in parts]), np.concatenate([p.bound for p in parts]), witnesses)
 
 
 def search_among_many(target: np.ndarray, rows: np.ndarray, extra: np.ndarray, scale: float) -> Found:
@@ -129,20 +127,19 @@ def search_among_many(target: np.ndarray, rows: np.ndarray, extra: np.ndarray, s
     shortlist = np.sort(np.argsort(-worst, kind="stable")[:_SHORTLIST])
     found = Columns(rows[shortlist]).search(target[None], extra, scale)
     for _ in range(_ROUNDS):
-        if found.how[0] != kernel.OPEN:
+        if 0 not in found.witnesses:
             break
-        f = found.witness[0] * gain
-        values = _along(rows, f)
-        bound = float(values.max() - (wanted - extra) @ f)
+        x = found.witnesses[0]
+        values = _along(rows, x * gain)
+        bound = float(values.max() - (wanted - extra) @ (x * gain))
         joining = np.argsort(-values, kind="stable")[: _SHORTLIST // 4]
         grown = np.union1d(shortlist, joining)
         if bound < 0 or len(grown) == len(shortlist):
-            found.bound[0] = bound
-            break
+            return Found(found.cover, np.array([bound]), found.witnesses)
         shortlist = grown
         found = Columns(rows[shortlist]).search(target[None], extra, scale)
     cover = Cover(found.cover.starts, shortlist[found.cover.index], found.cover.weight)
-    return Found(cover, found.how, found.bound, found.witness)
+    return Found(cover, found.bound, found.witnesses)
 
 
 def _along(rows: np.ndarray, f: np.ndarray) -> np.ndarray:

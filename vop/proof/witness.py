@@ -7,8 +7,9 @@ import numpy as np
 from vop.hermitian import pack_covariance, pack_excitations, unpack
 from vop.proof.result import Unproved
 
-#: Excitations drawn from a witness covariance in search of one that fails by itself.
-_DRAWS = 512
+#: Excitations drawn from a witness covariance in search of one that fails by itself: so many, or
+#: fewer where there are very many columns, but some.
+_DRAWS, _PRODUCTS, _SOME = 512, 1 << 24, 8
 #: Columns at a time, bounds memory.
 _CHUNK = 1 << 15
 
@@ -35,7 +36,8 @@ def examine(
     x = unpack(witness)
     values, vectors = np.linalg.eigh(x)
     n = len(values)
-    draws = np.random.default_rng(0).standard_normal((_DRAWS, n, 2)) @ np.array([1, 1j])
+    count = max(_SOME, min(_DRAWS, _PRODUCTS // len(columns)))
+    draws = np.random.default_rng(0).standard_normal((count, n, 2)) @ np.array([1, 1j])
     w = np.concatenate([vectors.T, (draws * np.sqrt(values.clip(min=0))) @ vectors.T])
     w /= np.linalg.norm(w, axis=1, keepdims=True)
     functionals = np.concatenate([pack_covariance(x)[None], pack_excitations(w)])
