@@ -49,7 +49,7 @@ def find_cubes(
         Where the mass is not positive or the rule is not known.
     """
     body = tissue.body
-    voxels = np.argwhere(body)
+    voxels = np.ascontiguousarray(np.argwhere(body))
     flat: np.ndarray = np.flatnonzero(body)
     if average_mass_kg is None:
         return _points(grid, tissue, voxels, flat)

@@ -75,7 +75,7 @@ def pack_samples(source: FieldSource, around: Box, combine: str, scratch: Scratc
     terms = [(variants.index((c, i)), k, j) for c, component in enumerate(samples) for k, j, i in component]
     touched = _touched(source, around)
     averaged = combine == "field" and source.centring != "cell"
-    kept = source.tissue.body[around] if averaged else touched
+    kept = np.ascontiguousarray(source.tissue.body[around] if averaged else touched)
     shape = ((source.n_channels + 1) // 2, *kept.shape[:2], -(-(around[2].stop - around[2].start) // STRETCH))
     packed = scratch.array("samples", (*shape, len(variants), PAIR), np.float32)
     if source.n_channels % 2:
