@@ -90,21 +90,9 @@ def convex_weights(columns, columns_t, target, ranking, scale, n, gain, limit, w
         trace = _resolvent(inverse, n, gain, square, f)
         if tau == 0.0:
             tau = trace
-        _along(columns_t, f, values)
-        bound = -_dot(f, target)
-        bound = (bound + _largest(values)) / trace
-        if bound < upper:
-            upper = bound
-            for p in range(width):
-                witness[p] = f[p] / (gain[p] * trace)
-        if t > _ENOUGH * scale:
-            status = FOUND
-            break
-        if upper < -1e-13 * scale:
-            status = NONE
-            if upper - t < _SETTLED * -upper:
-                break
-        if upper - t < _CONVERGED * scale:
+        upper = _bounded(columns_t, f, target, trace, gain, values, upper, witness)
+        status, settled = _outcome(t, upper, scale)
+        if settled:
             break
         before = m
         m = _join(columns, values, chosen, c, m, active, target, t, n, current, moved, square, factor)
@@ -114,6 +102,14 @@ def convex_weights(columns, columns_t, target, ranking, scale, n, gain, limit, w
         slope = _direction(rows, c, m, gradient, hessian, step)
         if not slope < np.inf:
             break
+        if -slope < 1.0:
+            # Near the path: the same W to first order at the end of the step bounds far better.
+            corrected = _corrected(rows, step, m, inverse, n, gain, square, moved, factor, f)
+            if corrected > 0.0:
+                upper = _bounded(columns_t, f, target, corrected, gain, values, upper, witness)
+                status, settled = _outcome(t, upper, scale)
+                if settled:
+                    break
         start = -tau * t - logdet
         for i in range(m):
             start -= math.log(c[i])
@@ -141,7 +137,7 @@ def convex_weights(columns, columns_t, target, ranking, scale, n, gain, limit, w
             if tau * scale > 1e14:
                 break
 
-    if status == UNDECIDED and t > 0.0:
+    if status != FOUND and t > 0.0:
         status = FOUND
     if status == FOUND:
         m = _rounded(columns, chosen, c, m, target, n, square, factor, moved, trial)
@@ -225,6 +221,66 @@ def _resolvent(inverse, n, gain, w, f):
             w[j, i] = total.conjugate()
         trace += w[i, i].real
     pack_row(w, n, f)
+    for p in range(f.shape[0]):
+        f[p] *= gain[p]
+    return trace
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _bounded(columns_t, f, target, trace, gain, values, upper, witness):
+    """The least upper bound so far; values[k] = tr(C_k W) of the functional f of a W ⪰ 0."""
+    _along(columns_t, f, values)
+    bound = (_largest(values) - _dot(f, target)) / trace
+    if not bound < upper:
+        return upper
+    for p in range(f.shape[0]):
+        witness[p] = f[p] / (gain[p] * trace)
+    return bound
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _outcome(t, upper, scale):
+    """(status, whether the answer is known)."""
+    if t > _ENOUGH * scale:
+        return FOUND, True
+    if upper < -1e-13 * scale:
+        return NONE, upper - t < _SETTLED * -upper
+    return UNDECIDED, upper - t < _CONVERGED * scale
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _corrected(rows, step, m, inverse, n, gain, square, packed, factor, f):
+    """f = functional of W − W dS W, with dS the change of S = Σ c C − T − t1 along the Newton step.
+
+    It meets the conditions of the path to first order. Returns its trace; 0 where it is not ⪰ 0.
+    """
+    for p in range(packed.shape[0]):
+        change = -step[m] * rows[p, m]
+        for i in range(m):
+            change += step[i] * rows[p, i]
+        packed[p] = -change / math.sqrt(gain[p])
+    expand(packed, n, square)
+    for i in range(n):
+        square[i, i] += 1.0
+    # 1 − L⁻¹ dS L⁻ᴴ = G Gᴴ, and the wanted matrix is (L⁻ᴴG)(L⁻ᴴG)ᴴ.
+    if cholesky(square, n, 0.0, factor) < n:
+        return 0.0
+    trace = 0.0
+    half = np.zeros((n, n), dtype=np.complex128)
+    for i in range(n):
+        for j in range(n):
+            total = 0.0j
+            for k in range(max(i, j), n):
+                total += inverse[k, i].conjugate() * factor[k, j]
+            half[i, j] = total
+    for i in range(n):
+        for j in range(i, n):
+            total = 0.0j
+            for k in range(n):
+                total += half[i, k] * half[j, k].conjugate()
+            square[i, j] = total
+        trace += square[i, i].real
+    pack_row(square, n, f)
     for p in range(f.shape[0]):
         f[p] *= gain[p]
     return trace
