@@ -57,6 +57,26 @@ def test_a_face_cube_of_five_percent_more_volume_is_a_tie_that_competes(
     assert list(chosen[0]) == [True, competes, True, True, True, True]
 
 
+@pytest.mark.parametrize(("beyond", "valid"), [(-1e-7, True), (5e-10, True), (1e-7, False)])
+def test_ten_percent_of_background_is_a_tie_that_is_valid(beyond: float, valid: bool) -> None:
+    # By hand: a gap of air across the body is 0.1·(1 + beyond) of the cube about the middle voxel.
+    gap = 0.002
+    side = gap / (0.1 * (1 + beyond))
+    wanted = 1000.0 * side**2 * (side - gap)
+    below = np.arange(-20, 4) * STEP - STEP / 2
+    along = np.concatenate([below, below[-1] + gap + np.arange(18) * STEP])
+    across = np.arange(-20, 22) * STEP - STEP / 2
+    rho = np.full((along.size - 1, 41, 41), 1000.0)
+    rho[below.size - 1] = 0.0
+    geometry = find_cubes(RectilinearGrid(across, across, along), Tissue(0 * rho, rho), wanted)
+    middle = np.ravel_multi_index((20, 20, 20), rho.shape)
+    status = geometry.status.flat[middle]
+    assert (status == VoxelStatus.VALID) == valid
+    if valid:
+        (box,) = geometry.box_m[geometry.voxel == middle]
+        assert box == pytest.approx(np.array([-1, 1, -1, 1, -1, 1]) * side / 2, rel=1e-12)
+
+
 def test_no_voxel_vanishes_in_a_body_of_hardly_more_than_the_mass() -> None:
     # Porous, so that no centred cube is valid; from its middle no face-anchored cube finds the mass.
     rho = np.full((9, 9, 9), 1000.0)
