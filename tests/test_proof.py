@@ -84,6 +84,42 @@ def _check_witness(x: np.ndarray | None, target: np.ndarray, vops: np.ndarray) -
     assert np.trace(target @ x).real > np.trace(vops @ x, axis1=1, axis2=2).real.max()
 
 
+def test_eight_channels_and_forty_vops_agree_with_a_semidefinite_solver() -> None:
+    # Reference: clarabel. More VOPs than the convex problem starts with, so that columns must join.
+    rng = np.random.default_rng(8)
+    vops = _float32(random_matrices(rng, 40, 8, rank=2) + 0.02 * np.eye(8))
+    program = SemidefiniteProgram(vops)
+    targets = random_matrices(rng, 8, 8, rank=3) * 0.5
+    best = np.array([program.best_margin(t) for t in targets])
+    for distance, wanted in ((4e-6, 8), (-4e-6, 0)):
+        moved = targets + (best - distance * program.scale)[:, None, None] * np.eye(8)
+        model = vop.SarModel(pack(moved, np.float32), metadata(8))
+        result = prove(_without_claims_on_overestimation(set_of(vops, model, 1.0)), model)
+        assert result.underestimation.n_proved == wanted
+
+
+def test_no_target_away_from_the_boundary_is_left_undecided() -> None:
+    # Low ranks, scales from 1e-8 to 1e8 W/kg, and targets within 1e-6 of mixtures of the VOPs. Whatever
+    # is not proved must come with a covariance that refutes it (numpy).
+    rng = np.random.default_rng(11)
+    refuted = 0
+    for _ in range(40):
+        n, k = int(rng.integers(1, 8)), int(rng.integers(1, 40))
+        scale = 10.0 ** rng.uniform(-8, 8)
+        vops = _float32(random_matrices(rng, k, n, rank=int(rng.integers(1, n + 1))) * scale)
+        mixtures = np.einsum("tk,kij->tij", rng.dirichlet(np.full(k, 0.3), 20), vops)
+        moved = 1 + rng.choice([-1, 1], 20) * 10.0 ** rng.uniform(-6, -1, 20)
+        other = random_matrices(rng, 20, n, rank=2) * scale * rng.uniform(0.01, 1, (20, 1, 1))
+        targets = np.concatenate([mixtures * moved[:, None, None], other])
+        model = vop.SarModel(pack(targets, np.float32), metadata(n))
+        result = prove(_without_claims_on_overestimation(set_of(vops, model, 1.0)), model)
+        for item in result.underestimation.unproved[:32]:
+            assert item.shortfall > 0
+            _check_witness(item.covariance, model.matrices(item.index), vops)
+            refuted += 1
+    assert refuted > 100
+
+
 def test_commuting_matrices_are_a_linear_programme() -> None:
     # Reference: scipy's linprog (HiGHS). Diagonal matrices dominate entry by entry.
     rng = np.random.default_rng(7)
@@ -272,6 +308,17 @@ def test_a_model_that_holds_nan_is_not_proved(pair: tuple[vop.VopSet, vop.SarMod
     packed[17, 3] = np.nan
     result = prove(vop_set, replace(model, packed=packed))
     assert [item.index for item in result.underestimation.unproved] == [17]
+
+
+@pytest.mark.parametrize("value", [np.nan, np.inf])
+def test_a_set_that_holds_what_is_no_number_is_refused(
+    pair: tuple[vop.VopSet, vop.SarModel], value: float
+) -> None:
+    vop_set, model = pair
+    packed = vop_set.packed.copy()
+    packed[1, 5] = value
+    with pytest.raises(InputError, match="NaN or infinite"):
+        prove(replace(vop_set, packed=packed), model)
 
 
 def test_a_single_channel_is_proved_and_refuted() -> None:

@@ -57,11 +57,15 @@ def attack(
     Raises
     ------
     InputError
-        Where set and model differ in channels or reference, or ``n_excitations`` < 1.
+        Where set and model differ in channels, reference or measure, or ``n_excitations`` < 1.
     """
     theirs, ours = vop_set.metadata, model.metadata
-    if theirs.channel_names != ours.channel_names or theirs.reference != ours.reference:
-        raise InputError("set and model differ in channels or in reference; they do not belong together")
+    if (theirs.channel_names, theirs.reference, theirs.measure) != (
+        ours.channel_names,
+        ours.reference,
+        ours.measure,
+    ):
+        raise InputError("set and model differ in channels, reference or measure; they do not belong together")
     if n_excitations < 1:
         raise InputError(f"n_excitations is {n_excitations}; at least 1 is needed")
     return _Attack(vop_set, model, seed, progress).run(n_excitations)

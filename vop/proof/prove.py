@@ -18,7 +18,7 @@ from vop.proof.search import WITNESSES, Columns, Found, search_among_many, searc
 from vop.proof.witness import examine
 from vop.proof.worst_case import Attained, exact_quotient_reaches, find_attaining
 from vop.sarmodel import SarModel
-from vop.storage import refuse_existing
+from vop.storage import refuse_existing, require_finite
 from vop.vopset import VopSet
 
 
@@ -53,12 +53,12 @@ def prove(
     Raises
     ------
     InputError
-        Where set and model differ in channels or in the reference of excitations.
+        Where set and model differ in channels, measure or reference, or the set holds NaN or infinity.
     OutputError
         Where the certificate exists and not ``force``, or cannot be written.
     """
     began = time.perf_counter()
-    _require_same_excitations(vop_set, model)
+    _require_fitting(vop_set, model)
     if certificate_path is not None:
         refuse_existing(certificate_path, force)
     scale = vop_set.worst_case
@@ -89,7 +89,7 @@ def recheck(
         Where the certificate is damaged, altered, or about another set or model.
     """
     began = time.perf_counter()
-    _require_same_excitations(vop_set, model)
+    _require_fitting(vop_set, model)
     found = Certificate.load(certificate, len(model), len(vop_set), vop_set.n_channels)
     for what, ours, theirs in (
         ("set", vop_set.digest(), found.set_digest),
@@ -102,7 +102,9 @@ def recheck(
     return _certified(vop_set, model, found, began, progress, None)
 
 
-def _require_same_excitations(vop_set: VopSet, model: SarModel) -> None:
+def _require_fitting(vop_set: VopSet, model: SarModel) -> None:
+    require_finite(vop_set.packed, "the set: vops/packed")
+    require_finite(_overestimation_row(vop_set), "the set: overestimation matrix")
     if vop_set.metadata.channel_names != model.metadata.channel_names:
         raise InputError(
             f"the set has channels {', '.join(vop_set.metadata.channel_names)}, "
