@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import ast
 from dataclasses import replace
 from fractions import Fraction
 from pathlib import Path
@@ -289,6 +290,39 @@ def test_result_is_the_same_for_any_number_of_threads(
     finally:
         numba.set_num_threads(before)
     assert len(set(sums)) == 1
+
+
+def test_the_proof_shares_no_code_with_the_compressor_but_packing_and_data_classes() -> None:
+    # Read from the source with Python's own parser: what each side imports from this package, followed
+    # to the end, save through the classes of data that pass between them.
+    package = Path(vop.__file__).parent
+    data = {"cubes", "errors", "grid", "hermitian", "matrices", "metadata", "progress", "sarmodel"}
+    data = {f"vop.{name}" for name in (*data, "storage", "vopset")}
+
+    def imported(start: list[Path]) -> set[str]:
+        found, to_read = set(), list(start)
+        while to_read:
+            for node in ast.walk(ast.parse(to_read.pop().read_text(encoding="utf-8"))):
+                if not (isinstance(node, ast.ImportFrom) and (node.module or "").startswith("vop")):
+                    continue
+                for name in (node.module, *(f"{node.module}.{alias.name}" for alias in node.names)):
+                    path = package.parent / (name.replace(".", "/") + ".py")
+                    if path.exists() and name not in found:
+                        found.add(name)
+                        to_read += [] if name in data else [path]
+        return found
+
+    proof = imported([*(package / "proof").glob("*.py")])
+    compressor = imported([*(package / "compression").glob("*.py")])
+    assert "vop.kernels.proof_psd" in proof
+    assert "vop.hermitian" in proof & compressor
+    assert proof & compressor <= data
+
+
+def test_single_and_double_precision_are_not_mixed_up(pair: tuple[vop.VopSet, vop.SarModel]) -> None:
+    vop_set, model = pair
+    with pytest.raises(InputError, match="float32"):
+        prove(replace(vop_set, packed=vop_set.packed.astype(float)), model)
 
 
 def test_set_and_model_of_different_channels_or_references_are_refused(

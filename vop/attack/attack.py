@@ -65,7 +65,7 @@ def attack(
         ours.reference,
         ours.measure,
     ):
-        raise InputError("set and model differ in channels, reference or measure; they do not belong together")
+        raise InputError("set and model differ in channels, reference or measure and do not belong together")
     if n_excitations < 1:
         raise InputError(f"n_excitations is {n_excitations}; at least 1 is needed")
     return _Attack(vop_set, model, seed, progress).run(n_excitations)

@@ -9,9 +9,9 @@ import numpy as np
 from vop.errors import VopError
 from vop.hermitian import channels_from_width
 from vop.kernels.proof_psd import certify, keeps_small_numbers
-from vop.parallel import map_chunks
 from vop.progress import Progress
 from vop.proof.cover import WEIGHT_BITS, Cover
+from vop.proof.parallel import map_chunks
 
 #: Targets at a time; fixed.
 _CHUNK = 1 << 13
@@ -47,8 +47,10 @@ def certify_cover(
     cover : sound as of :meth:`Cover.fault`; open targets count as not proved.
     """
     n = channels_from_width(targets.shape[1])
+    # False until proved, whatever becomes of a chunk.
+    proved = np.zeros(len(targets), dtype=np.bool_)
 
-    def work(first: int, last: int) -> tuple[np.ndarray, float, int]:
+    def work(first: int, last: int) -> tuple[float, int]:
         if not keeps_small_numbers(np.float64(2.0**-1022), np.float32(2.0**-126)):
             raise VopError(
                 "this process flushes small numbers to zero (some library switched that on), "
@@ -57,7 +59,6 @@ def certify_cover(
         part = cover.rows(first, last)
         used, index = np.unique(part.index, return_inverse=True)
         weight = np.ldexp(part.weight.astype(np.float64), -WEIGHT_BITS)
-        proved = np.zeros(last - first, dtype=np.bool_)
         margin, row = certify(
             np.array(targets[first:last], dtype=np.float32, order="C"),
             extra,
@@ -66,10 +67,10 @@ def certify_cover(
             index.astype(np.int64),
             weight,
             n,
-            proved,
+            proved[first:last],
         )
-        return proved, margin, first + row
+        return margin, first + row
 
     results = map_chunks(label, len(targets), _CHUNK, work, progress)
-    margin, row = min(((m, r) for _, m, r in results), default=(np.inf, -1))
-    return Certified(np.concatenate([p for p, _, _ in results]), float(margin), int(row))
+    margin, row = min(results, default=(np.inf, -1))
+    return Certified(proved, float(margin), int(row))

@@ -103,6 +103,11 @@ def recheck(
 
 
 def _require_fitting(vop_set: VopSet, model: SarModel) -> None:
+    for what, packed in (("set", vop_set.packed), ("model", model.packed)):
+        if packed.dtype != np.float32:
+            raise InputError(
+                f"the {what} holds {packed.dtype}; what is proved are float32 numbers as in files"
+            )
     require_finite(vop_set.packed, "the set: vops/packed")
     require_finite(_overestimation_row(vop_set), "the set: overestimation matrix")
     if vop_set.metadata.channel_names != model.metadata.channel_names:

@@ -8,9 +8,9 @@ import numpy as np
 
 from vop.hermitian import channels_from_width, inner_weights
 from vop.kernels import proof_search as kernel
-from vop.parallel import map_chunks
 from vop.progress import Progress, silent
 from vop.proof.cover import WEIGHT_BITS, Cover
+from vop.proof.parallel import map_chunks
 
 #: Targets that share a pool of remembered combinations; fixed.
 _CHUNK = 512

@@ -8,8 +8,8 @@ from fractions import Fraction
 import numpy as np
 
 from vop.hermitian import channels_from_width, inner_weights, unpack
-from vop.parallel import map_chunks
 from vop.progress import Progress
+from vop.proof.parallel import map_chunks
 
 _CHUNK = 1 << 13
 
